@@ -1,0 +1,196 @@
+"""Loss of the readings of one run, with its exact derivatives.
+
+For one run with coordinates x = (u, z) the loss is minus the log likelihood
+
+    L = sum e^2 / (2 W) + ln(2 pi W) / 2           a reading, e = read - mean, W its variance
+    L = sum -ln Phi(s (limit - mean) / sqrt(W))    a censored one: s = 1 below, -1 above the limit
+
+Mean and W are the candidate's own. Derivatives in x are chained through (mean, W), whose own come
+from nested forward differentiation (``second_order``) or, where that is dear, only to first order.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from math import log, pi
+from typing import NamedTuple
+
+import numpy as np
+
+from designer.arrays import Array, jax, jnp
+from designer.signals import Law, Signal
+
+
+class Design(NamedTuple):
+    """Runs of a study as arrays: conditions (run, condition), times (run, time) in s, and mask
+    (run, time, signal), 1 where something is read and 0 where not (padding included)."""
+
+    conditions: Array
+    times: Array
+    mask: Array
+
+
+class Readings(NamedTuple):
+    """values (run, time, signal) and side: 0 a value, -1 "below lowest", 1 "above highest"."""
+
+    values: Array
+    side: Array
+
+
+class RunTerms(NamedTuple):
+    """Loss of one run, its gradient (x,), Hessian (x, x) and positive Gauss-Newton matrix (x, x)."""
+
+    loss: Array
+    gradient: Array
+    hessian: Array
+    gauss_newton: Array
+    trouble: Array
+
+
+class _Slopes(NamedTuple):
+    """Derivatives of the loss of each reading in its mean m and variance w; *_gn are the parts kept
+    by Gauss-Newton."""
+
+    loss: Array
+    m: Array
+    w: Array
+    mm: Array
+    mw: Array
+    ww: Array
+    mm_gn: Array
+    mw_gn: Array
+    ww_gn: Array
+
+
+def limits(law: Law) -> tuple[Array, Array]:
+    """lowest and highest trusted value of every signal."""
+    lowest = np.array([channel.lowest for channel in law.channels])
+    highest = np.array([channel.highest for channel in law.channels])
+    return lowest, highest
+
+
+def _uncensored(error: Array, variance: Array) -> _Slopes:
+    inverse = 1 / variance
+    square = error * error * inverse
+    zero = jnp.zeros_like(error)
+    return _Slopes(
+        loss=(square + jnp.log(variance) + log(2 * pi)) / 2,
+        m=-error * inverse,
+        w=(1 - square) * inverse / 2,
+        mm=inverse,
+        mw=error * inverse**2,
+        ww=(square - 0.5) * inverse**2,
+        mm_gn=inverse,
+        mw_gn=zero,
+        ww_gn=inverse**2 / 2,
+    )
+
+
+def _censored(sign: Array, distance: Array, variance: Array) -> _Slopes:
+    """distance = limit - mean; x = sign * distance / sqrt(W); -ln Phi(x) and its slopes."""
+    root = jnp.sqrt(variance)
+    x = sign * distance / root
+    tail = jax.scipy.special.log_ndtr(x)
+    mills = jnp.exp(-x * x / 2 - log(2 * pi) / 2 - tail)
+    bend = mills * (mills + x)
+    mm_gn = bend / variance
+    mw_gn = sign * bend * x / (2 * variance * root)
+    ww_gn = bend * x * x / (4 * variance**2)
+    return _Slopes(
+        loss=-tail,
+        m=sign * mills / root,
+        w=mills * x / (2 * variance),
+        mm=mm_gn,
+        mw=mw_gn - sign * mills / (2 * variance * root),
+        ww=ww_gn - 3 * mills * x / (4 * variance**2),
+        mm_gn=mm_gn,
+        mw_gn=mw_gn,
+        ww_gn=ww_gn,
+    )
+
+
+def _slopes(law: Law, signal: Signal, readings: Readings, mask: Array) -> _Slopes:
+    lowest, highest = limits(law)
+    plain = _uncensored(readings.values - signal.mean, signal.variance)
+    if not np.isfinite(np.concatenate([lowest, highest])).any():
+        return _Slopes(*(mask * part for part in plain))
+    limit = jnp.where(readings.side < 0, lowest, highest)
+    censored = readings.side != 0
+    distance = jnp.where(censored, limit - signal.mean, 0.0)
+    cut = _censored(-jnp.sign(readings.side) + (readings.side == 0), distance, signal.variance)
+    return _Slopes(*(mask * jnp.where(censored, c, p) for c, p in zip(cut, plain, strict=True)))
+
+
+def loss(law: Law, signal: Signal, readings: Readings, mask: Array) -> Array:
+    """Summed loss of the readings; leading axes of ``signal`` broadcast against ``readings``."""
+    return _slopes(law, signal, readings, mask).loss.sum((-3, -2, -1))
+
+
+def second_order(
+    function: Callable[[Array], tuple[Array, ...]], x: Array
+) -> tuple[tuple[Array, ...], tuple[Array, ...], tuple[Array, ...]]:
+    """Values, Jacobians (x, ...) and Hessians (x, x, ...) by forward-over-forward differentiation.
+
+    Each pair of coordinates is differentiated once.
+    """
+    size = x.shape[0]
+    rows = [i for i in range(size) for _ in range(i, size)]
+    columns = [j for i in range(size) for j in range(i, size)]
+    basis = jnp.eye(size)
+
+    def along(v: Array, w: Array) -> tuple[tuple[Array, ...], tuple[Array, ...], tuple[Array, ...]]:
+        first = lambda at: jax.jvp(function, (at,), (v,))  # noqa: E731
+        (value, slope), (_, bend) = jax.jvp(first, (x,), (w,))
+        return value, slope, bend
+
+    value, slope, bend = jax.vmap(along, out_axes=(None, 0, 0))(
+        basis[jnp.array(rows)], basis[jnp.array(columns)]
+    )
+    pair = {(i, j): k for k, (i, j) in enumerate(zip(rows, columns, strict=True))}
+    firsts = jnp.array([pair[i, i] for i in range(size)])
+    square = jnp.array([[pair[min(i, j), max(i, j)] for j in range(size)] for i in range(size)])
+    return value, tuple(s[firsts] for s in slope), tuple(b[square] for b in bend)
+
+
+def run_terms(law: Law, x: Array, run: Design, readings: Readings, exact: bool) -> RunTerms:
+    """Loss and derivatives of one run at x = (u, z).
+
+    run and readings are one run's rows. Without ``exact`` the Hessian returned is Gauss-Newton's.
+    """
+    structural = len(law.structural)
+
+    def parts(at: Array) -> tuple[Array, Array, Array]:
+        signal = law.read(at[:structural], at[structural:], run.conditions, run.times)
+        return signal.mean, signal.variance, signal.trouble
+
+    if exact:
+        (mean, variance, trouble), (jm, jw, _), (hm, hw, _) = second_order(parts, x)
+    else:
+        (mean, variance, trouble), (jm, jw, _) = _first_order(parts, x)
+        hm = hw = None
+    s = _slopes(law, Signal(mean, variance, trouble), readings, run.mask)
+    gradient = _sum(s.m * jm + s.w * jw)
+    cross = _outer(jm, jw)
+    cross = cross + jnp.swapaxes(cross, 0, 1)
+    mm, ww = _outer(jm, jm), _outer(jw, jw)
+    gauss_newton = _sum(s.mm_gn * mm + s.mw_gn * cross + s.ww_gn * ww)
+    hessian = gauss_newton
+    if exact:
+        hessian = _sum(s.mm * mm + s.mw * cross + s.ww * ww + s.m * hm + s.w * hw)
+    return RunTerms(s.loss.sum(), gradient, hessian, gauss_newton, jnp.max(trouble))
+
+
+def _first_order(
+    function: Callable[[Array], tuple[Array, ...]], x: Array
+) -> tuple[tuple[Array, ...], tuple[Array, ...]]:
+    along = lambda v: jax.jvp(function, (x,), (v,))  # noqa: E731
+    return jax.vmap(along, out_axes=(None, 0))(jnp.eye(x.shape[0]))
+
+
+def _outer(a: Array, b: Array) -> Array:
+    return a[:, None] * b[None, :]
+
+
+def _sum(terms: Array) -> Array:
+    """Sum over the readings (the last two axes)."""
+    return terms.sum((-2, -1))
