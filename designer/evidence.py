@@ -183,7 +183,7 @@ def _minimise(
 ) -> _State:
     """Batched Newton-Levenberg; design shared by all data sets."""
     begin = jax.vmap(partial(_begin, law), in_axes=(0, None, 0))
-    step = jax.vmap(partial(_step, law), in_axes=(0, None, 0, None))
+    step = jax.vmap(partial(_step, law), in_axes=(0, None, 0, 0))
 
     def going(carry: tuple[Array, _State]) -> Array:
         return (carry[0] < most) & ~jnp.all(carry[1].done)
@@ -264,17 +264,24 @@ class Kernel:
         self.nodes = scan_nodes(len(law.structural))
         self._cold = jax.jit(self._fit_cold)
         self._warm = jax.jit(self._fit_warm)
+        self._scan = jax.jit(partial(scan, law))
 
     def _fit_cold(self, design: Design, readings: Readings, nodes: Array) -> Fit:
         at = scan(self.law, design, readings, nodes)
         u = nodes[jnp.argmin(at, axis=1)]
         z = jnp.zeros((u.shape[0], design.times.shape[0], len(self.law.errors)))
-        return self._fit_warm(design, readings, Point(u, z), jnp.ones(len(self.law.structural)))
+        return self._fit_warm(design, readings, Point(u, z), jnp.ones_like(u))
 
     def _fit_warm(self, design: Design, readings: Readings, start: Point, free: Array) -> Fit:
         state = _minimise(self.law, start, design, readings, free, MOST_STEPS)
-        finish = jax.vmap(partial(_finish, self.law), in_axes=(0, None, 0, None))
+        finish = jax.vmap(partial(_finish, self.law), in_axes=(0, None, 0, 0))
         return finish(state, design, readings, free)
+
+    def best_nodes(self, design: Design, readings: Readings, count: int) -> np.ndarray:
+        """The ``count`` best structural nodes of every data set: (draw, count, structural)."""
+        at = np.asarray(self._scan(design, readings, self.nodes))
+        order = np.argsort(at, axis=1)[:, :count]
+        return np.asarray(self.nodes)[order]
 
     def fit(
         self,
@@ -285,10 +292,11 @@ class Kernel:
     ) -> Fit:
         """Fit every data set of ``readings`` (draw, run, time, signal); arrays of the result are numpy.
 
-        start: warm start of each data set; without it the structural nodes are scanned. free marks
-        (1 or 0) structural coordinates that move.
+        start: warm start of each data set; without it the structural nodes are scanned. free (draw,
+        structural) is 1 for structural coordinates that move and 0 for those held at the start.
         """
-        free = jnp.ones(len(self.law.structural)) if free is None else jnp.asarray(free)
+        if start is not None and free is None:
+            free = np.ones_like(start.u)
         count = np.shape(readings.values)[0]
         parts = []
         for begin in range(0, count, self.lanes):
@@ -297,7 +305,8 @@ class Kernel:
             if start is None:
                 fit = self._cold(design, some, self.nodes)
             else:
-                fit = self._warm(design, some, Point(*(np.asarray(x)[rows] for x in start)), free)
+                begin_at = Point(*(np.asarray(x)[rows] for x in start))
+                fit = self._warm(design, some, begin_at, np.asarray(free)[rows])
             parts.append([np.asarray(x)[: count - begin] for x in fit])
         return Fit(*(np.concatenate(column) for column in zip(*parts, strict=True)))
 
