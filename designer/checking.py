@@ -110,7 +110,8 @@ def _carried(
         return even, ()
     if not share:
         notes.warn(
-            "the free-order alternative is left out (free_order): a law that is not on the list can go unnoticed"
+            "the free-order alternative is left out (free_order): "
+            "a law that is not on the list can go unnoticed"
         )
         return even, ()
     (equation,) = there.equations.values()

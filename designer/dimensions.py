@@ -75,6 +75,7 @@ class Clash:
 
     part: str
     message: str
+    advice: str = ""
 
 
 @dataclass
@@ -98,13 +99,13 @@ class Deduction:
             out = out.plus(self.solved.get(name, Form(unknown={name: Fraction(1)})), factor)
         return out
 
-    def equal(self, left: Form, right: Form, part: str, message: str) -> None:
+    def equal(self, left: Form, right: Form, part: str, message: str, advice: str = "") -> None:
         """Demand left = right; a contradiction is noted as ``message`` with both put in words."""
         difference = self.reduced(left.plus(right, Fraction(-1)))
         if not difference.unknown:
             if any(difference.known):
                 words = [self.in_words(left), self.in_words(right)]
-                self.clashes.append(Clash(part, message.format(*words)))
+                self.clashes.append(Clash(part, message.format(*words), advice))
             return
         name, factor = next(iter(difference.unknown.items()))
         rest = Form(difference.known, {n: f for n, f in difference.unknown.items() if n != name})
@@ -171,7 +172,9 @@ class Deduction:
         if number is not None:
             return self.of(base).times(Fraction(number).limit_denominator(1000))
         message = "the base of an exponent that is itself unknown must be {1}, not {0}"
-        self.equal(self.of(base), PLAIN, written(node), message)
+        divided = f"({written(base)}/c_ref)^{written(exponent, 4)}"
+        advice = f"Divide by a reference: {divided}, with c_ref in [constants]"
+        self.equal(self.of(base), PLAIN, written(node), message, advice)
         return PLAIN
 
 

@@ -337,6 +337,5 @@ def species_known(notes: Notes, setting: Setting, entry: Entry, node: Node, what
 
 def report(notes: Notes, where: str, clashes: Sequence[Clash]) -> None:
     for clash in clashes:
-        notes.problem(
-            where, f"in {clash.part}: {clash.message}", advice="Check the units and the form of the rate"
-        )
+        advice = clash.advice or "Check the form of the expression and the units it rests on"
+        notes.problem(where, f"in {clash.part}: {clash.message}", advice=advice)

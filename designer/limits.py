@@ -40,10 +40,20 @@ def limits(notes: Notes) -> Limits:
             table, "longest_run", "no longest run: a run must end some time", 'Add longest_run = "3 h"'
         )
     zero = ("first_sample", "spacing", "setup_per_run")
-    times = {key: notes.positive(table.get(key), units.TIME, zero=key in zero) for key in TIMES}
+    times = {key: notes.positive(table.get(key), units.TIME, zero=key in zero) or 0.0 for key in TIMES}
     counts = {key: table.value.get(key) for key in ("runs", "samples_per_run", "samples_total")}
-    booked = times.pop("booked")
-    return Limits(**counts, booked=booked, **{key: value or 0.0 for key, value in times.items()})
+    booked = times.pop("booked") or None
+    first, spacing, longest, setup = times.values()
+    return Limits(
+        counts["runs"],
+        counts["samples_per_run"],
+        counts["samples_total"],
+        first,
+        spacing,
+        longest,
+        setup,
+        booked,
+    )
 
 
 def plan(notes: Notes, bounds: Limits, readings: Sequence[Reading]) -> PlanSize:

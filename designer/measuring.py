@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from typing import Any
 
 from designer import expressions, units
 from designer.dimensions import Deduction
-from designer.laws import parse, species_known
+from designer.laws import parse, report, species_known
 from designer.noting import Notes, near
 from designer.records import Candidate, Dimension, Prepared, Reading, RunErrors
 from designer.setting import Setting, rate_dimension
@@ -89,9 +90,7 @@ def _dimension(
     plain = {n: q.value for n, q in setting.constants.items() if q.dimension == units.NONE}
     deduction = Deduction(known, setting.species, plain)
     found = deduction.of(node)
-    for clash in deduction.clashes:
-        advice = "Check the units in [constants] and [conditions]"
-        notes.problem(entry.where, f"in {clash.part}: {clash.message}", advice=advice)
+    report(notes, entry.where, deduction.clashes)
     return None if deduction.clashes else found.dimension
 
 
@@ -107,7 +106,7 @@ def _unit(table: Entry, setting: Setting, node: expressions.Node, dimension: Dim
     return units.unit_of(dimension)
 
 
-def _errors(notes: Notes, table: Entry, dimension: Dimension) -> dict[str, float | None]:
+def _errors(notes: Notes, table: Entry, dimension: Dimension) -> dict[str, Any]:
     found: dict[str, float | None] = {
         "relative": notes.share(table.get("relative")) or 0.0,
         "absolute": notes.positive(table.get("absolute"), dimension, zero=True) or 0.0,

@@ -44,8 +44,9 @@ def _memory(notes: Notes, readings: Sequence[Reading]) -> None:
     for reading in readings:
         if reading.every is not None and reading.memory is None:
             notes.warn(
-                f"reading '{reading.name}' is recorded continuously and no memory is given: its readings count "
-                "as independent, which is seldom so. Give memory, the time over which its noise stays alike"
+                f"reading '{reading.name}' is recorded continuously and no memory is given: its readings "
+                "count as independent, which is seldom so. "
+                "Give memory, the time over which its noise stays alike"
             )
         if reading.every is None and reading.memory is not None:
             notes.warn(
@@ -64,7 +65,8 @@ def _absent(notes: Notes, setting: Setting, listed: Sequence[Candidate], reading
         for name in dict.fromkeys([*wanted, *used]):
             if name not in started | made:
                 notes.warn(
-                    f"'{name}' is neither started with nor made under '{candidate.name}': it is 0 there throughout"
+                    f"'{name}' is neither started with nor made under '{candidate.name}': "
+                    "it is 0 there throughout"
                 )
 
 
@@ -83,8 +85,9 @@ def _too_late(notes: Notes, setting: Setting, candidate: Candidate, bounds: Limi
     time = halflife.half_life(start, bounds.first_sample)
     if np.isfinite(time) and bounds.first_sample > 10 * time:
         notes.warn(
-            f"under '{candidate.name}' the first sample, at {units.show(bounds.first_sample, unit)}, comes after "
-            f"10 half-lives (one is about {units.show(time, unit)} at the middle of what is on offer)"
+            f"under '{candidate.name}' the first sample, at {units.show(bounds.first_sample, unit)}, "
+            f"comes after 10 half-lives (one is about {units.show(time, unit)} "
+            "at the middle of what is on offer)"
         )
 
 
@@ -101,9 +104,15 @@ def _abrupt(notes: Notes, setting: Setting, candidate: Candidate, step: Step) ->
         if np.isfinite(without) and without > 1e-9 * abs(full):
             notes.warn(
                 f"under '{candidate.name}' the rate does not fall to 0 as {name} runs out, though "
-                f"'{step.equation.text}' uses it up: the reaction then stops there abruptly. "
-                f"If {name} takes no part, give the candidate an equation of its own without it"
+                f"'{step.equation.text}' uses it up: the reaction then stops there abruptly"
+                f"{_instead(numbers, name)}"
             )
+
+
+def _instead(numbers: dict[str, float], name: str) -> str:
+    if sum(number < 0 for number in numbers.values()) == 1:
+        return ""
+    return f". If {name} takes no part, give the candidate an equation of its own without it"
 
 
 def _can_run_out(setting: Setting, numbers: dict[str, float], name: str) -> bool:

@@ -97,7 +97,8 @@ def _overriding(notes: Notes, entry: Entry | None) -> dict[int, Equation]:
 def _conditions(notes: Notes, root: Entry, species: set[str]) -> tuple[Condition, ...]:
     entry = root.get("conditions")
     if entry is None or not entry.value:
-        advice = 'Add [conditions] with the starting concentrations, such as ester = { from = "5 mM", to = "100 mM" }'
+        example = 'ester = { from = "5 mM", to = "100 mM" }'
+        advice = f"Add [conditions] with the starting concentrations, such as {example}"
         notes.missing(root, "conditions", "no conditions: a run must start from something", advice)
         return ()
     found = [_condition(notes, name, inner, name in species) for name, inner in entry.items()]

@@ -31,7 +31,10 @@ FORMS = (
     {"half_life", "give_or_take"},
 )
 BELIEF_KEYS = frozenset().union(*FORMS)
-WAYS = "one of: value with give_or_take or within; low and high; uniform; half_life with give_or_take; value alone"
+WAYS = (
+    "value with give_or_take or within, or low and high, or uniform, "
+    "or half_life with give_or_take, or value alone"
+)
 PILOT_ERROR = 0.03  # absolute, one standard deviation, where the file gives none
 _OBSERVATION = re.compile(r"\s*(?P<share>[\d.]+\s*%)\s+conversion\s+(?:after|at|in)\s+(?P<time>.+)")
 

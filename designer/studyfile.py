@@ -169,9 +169,8 @@ def _list_advice(keys: tuple[int | str, ...]) -> str:
 
 
 def _shown(value: Any) -> str:
-    words = {dict: "a table", list: "a list"}
-    if type(value) in words:
-        return words[type(value)]
+    if isinstance(value, dict | list):
+        return "a table" if isinstance(value, dict) else "a list"
     return f'"{value}"'[:60] if isinstance(value, str) else str(value).lower()[:60]
 
 
@@ -221,7 +220,7 @@ def allowed_keys(keys: tuple[int | str, ...]) -> list[str]:
     return [field.alias or name for name, field in table.model_fields.items()]
 
 
-def _remove(table: Any, keys: tuple[int | str, ...]) -> None:
+def _remove(table: Any, keys: tuple[Any, ...]) -> None:
     """Take out one value; an item of a list becomes None so that the others keep their numbers."""
     *path, last = keys
     for key in path:
@@ -229,6 +228,6 @@ def _remove(table: Any, keys: tuple[int | str, ...]) -> None:
         if table is None:
             return
     if isinstance(table, list):
-        table[last] = None  # type: ignore[index]
+        table[last] = None
     else:
         table.pop(last, None)

@@ -110,7 +110,7 @@ class Quantity:
 def _registry() -> Any:
     import pint
 
-    registry = pint.UnitRegistry(None)
+    registry: Any = pint.UnitRegistry(None)
     for line in _DEFINITIONS.split("\n"):
         if line:
             registry.define(line)
