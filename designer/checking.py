@@ -172,6 +172,8 @@ def _by_condition(
 ) -> tuple[tuple[str, float], ...]:
     found = []
     for name, inner in entry.items() if entry is not None else ():
+        if name not in known and notes.excused(name):
+            continue
         if name not in known:
             notes.problem(inner.where, f"'{name}' is no condition of this study", advice=near(name, known))
             continue
@@ -183,6 +185,8 @@ def _by_condition(
 
 def _caps(notes: Notes, caps: tuple[tuple[str, float], ...], conditions: dict[str, Condition]) -> None:
     for name, cap in caps:
+        if name not in conditions:
+            continue
         condition = conditions[name]
         if condition.high > cap * (1 + 1e-12):
             shown, highest = units.show(cap, condition.unit), units.show(condition.high, condition.unit)

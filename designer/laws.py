@@ -4,13 +4,14 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from math import isfinite
 
 from designer import expressions, stated, units
 from designer.dimensions import Clash, Deduction, exponents
-from designer.expressions import ExpressionError, Node
+from designer.expressions import ExpressionError, Node, Number
 from designer.noting import Notes, near
 from designer.records import Candidate, Constant, Dimension, Equation, Pilot, Step
-from designer.setting import RESERVED, Setting, rate_dimension
+from designer.setting import EQUATION, RESERVED, Setting, rate_dimension
 from designer.studyfile import Entry, allowed_keys
 
 OWN_KEYS = tuple(allowed_keys(("candidates",)))
@@ -67,12 +68,12 @@ class Reader:
         if wrong or any(self.notes.lost(f"{t.where}.belief") for t in tables):
             return
         if lacking and len(lacking) < len(tables):
-            for table in lacking:
+            for table in [t for t in lacking if not _misspelt(t, "belief")]:
                 advice = "Give every candidate a belief, or none"
                 self.notes.missing(table, "belief", "a candidate without a belief", advice)
             return
         total = sum(entry.value for entry in given if entry is not None)
-        if given and not lacking and abs(total - 1) > 1e-3:
+        if given and not lacking and abs(total - 1) > 2e-3:
             advice = f"Divide each by {total:.6g} to keep their ratios" if total > 0 else ""
             message = "the beliefs of the candidates do not sum to 1"
             self.notes.problem("candidates", message, f"{total:.6g}", "1", advice)
@@ -241,7 +242,7 @@ class Reader:
         for key, entry in wanted.items():
             dimension = deduction.dimension(key)
             if dimension is None:
-                if not self.notes.lost(entry.where):
+                if not self.notes.lost(entry.where) and self._complete(steps, wanted):
                     message = f"the unit of '{key}' cannot be found from the rate of '{name}'"
                     self.notes.problem(entry.where, message, advice="Give it as a value with a unit")
                 continue
@@ -259,6 +260,10 @@ class Reader:
             if constant is not None:
                 found[key] = constant
         return [found[key] for key in wanted if key in found], pilots
+
+    def _complete(self, steps: Sequence[Step], wanted: dict[str, Entry]) -> bool:
+        """Whether every name of the rates is known; otherwise units cannot be expected to follow."""
+        return all(n in self.setting.bare or n in wanted for s in steps for n in expressions.names(s.rate))
 
     def _constant(self, key: str, entry: Entry, dimension: Dimension, order: bool) -> Constant | None:
         belief = stated.belief(self.notes, entry, dimension, order)
@@ -307,20 +312,31 @@ class Reader:
         return [found] if found is not None else []
 
 
+def _misspelt(table: Entry, key: str) -> bool:
+    """Whether the table holds a key that is nearly this one (reported as a constant in no rate)."""
+    return any(near(found, [key]).startswith("Perhaps") for found in table.value if found not in OWN_KEYS)
+
+
 def parse(notes: Notes, entry: Entry, what: str) -> Node | None:
     """The expression of an entry; None (and a problem with its place) where it is none."""
     try:
-        return expressions.parse(entry.value)
+        node = expressions.parse(entry.value)
     except ExpressionError as reason:
         text = entry.value if len(entry.value) <= 60 else f"{entry.value[:57]}..."
         place = f'at character {reason.position + 1} of "{text}"'
         advice = "Names, numbers, [species], + - * / ^ ( ) and exp, log, sqrt are all there is"
         notes.problem(entry.where, f"{what} cannot be read: {reason} {place}", advice=advice)
         return None
+    if any(isinstance(part, Number) and not isfinite(part.value) for part in expressions.walk(node)):
+        notes.problem(entry.where, f"{what} holds a number too large to be one")
+        return None
+    return node
 
 
 def species_known(notes: Notes, setting: Setting, entry: Entry, node: Node, what: str) -> bool:
     """Whether every [species] of the expression occurs in an equation; a problem for each that does not."""
+    if EQUATION in notes.broken:  # the species are not all known
+        return False
     good = True
     for name in dict.fromkeys([*expressions.species(node), *expressions.species(node, initial=True)]):
         if name in setting.species:

@@ -88,9 +88,13 @@ def aim(notes: Notes, listed: Sequence[Candidate]) -> Aim:
     table = notes.raw.root.get("aim")
     if table is None:
         return Aim()
+    tables = notes.raw.root.get("candidates")
+    written = [key for table in (tables.each() if tables else ()) for key, _ in table.items()]
     names = [constant.name for candidate in listed for constant in candidate.constants]
     precision = []
     for name, entry in (table.get("precision") or NOTHING).items():
+        if name not in names and name in written:
+            continue  # its candidate has been reported
         if listed and name not in names:
             notes.problem(entry.where, f"'{name}' is no constant of a candidate", advice=near(name, names))
             continue
@@ -136,9 +140,8 @@ def _counts(notes: Notes, size: PlanSize, bounds: Limits) -> None:
         if most is not None and count > most:
             advice = f"Lower {where} or raise {ceiling} to {count}"
             if where == "plan":
-                advice = (
-                    f"Plan at most {most // size.runs} samples in each run, or raise {ceiling} to {count}"
-                )
+                fits = most // size.runs
+                advice = f"Raise {ceiling} to {count}" + (f", or plan {fits} samples a run" if fits else "")
             notes.problem(where, f"more than {ceiling} allows", f"{count}", f"at most {most}", advice)
 
 

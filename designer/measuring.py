@@ -154,6 +154,8 @@ def _prepared(notes: Notes, setting: Setting, entry: Entry | None) -> tuple[Prep
     names = [c.name for c in setting.conditions if c.name != "temperature"]
     found = []
     for name, inner in entry.items() if entry is not None else ():
+        if name not in names and notes.excused(name):
+            continue
         if name not in names:
             notes.problem(inner.where, f"'{name}' is no condition that is prepared", advice=near(name, names))
         elif isinstance(inner.value, dict):

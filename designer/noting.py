@@ -46,6 +46,7 @@ class Notes:
     raw: Raw
     problems: list[Problem] = field(default_factory=list)
     warnings: list[str] = field(default_factory=list)
+    broken: set[str] = field(default_factory=set)  # conditions and equations reported already
 
     def problem(
         self, where: str, message: str, found: str = "", expected: str = "", advice: str = ""
@@ -61,6 +62,10 @@ class Notes:
     def lost(self, where: str) -> bool:
         """Whether something at or below this path was no use and has been reported already."""
         return any(path == where or path.startswith((f"{where}.", f"{where}[")) for path in self.raw.dropped)
+
+    def excused(self, condition: str) -> bool:
+        """Whether this condition is in the file, but so that it has been reported already."""
+        return condition in self.broken or self.lost(f"conditions.{condition}")
 
     def problems_in(self, *tables: str) -> bool:
         """Whether a problem of one of these tables has been noted."""

@@ -11,6 +11,9 @@ from typing import Annotated, Any
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Discriminator, Field, Tag
 from pydantic_core import PydanticCustomError
 
+LARGEST = 1e300  # nothing measured is larger
+MOST = 10_000  # runs or samples
+
 
 def _kind(expected: str, accept: Any) -> BeforeValidator:
     def check(value: Any) -> Any:
@@ -24,16 +27,16 @@ def _kind(expected: str, accept: Any) -> BeforeValidator:
 
 
 def _is_number(value: Any) -> bool:
-    return isinstance(value, int | float) and not isinstance(value, bool)
+    return isinstance(value, int | float) and not isinstance(value, bool) and abs(value) < LARGEST
 
 
 def _is_count(value: Any) -> bool:
-    return isinstance(value, int) and not isinstance(value, bool) and value >= 1
+    return isinstance(value, int) and not isinstance(value, bool) and 1 <= value <= MOST
 
 
 Text = Annotated[Any, _kind("a text in quotes", lambda value: isinstance(value, str))]
 Number = Annotated[Any, _kind("a number", _is_number)]
-Count = Annotated[Any, _kind("a whole number of at least 1", _is_count)]
+Count = Annotated[Any, _kind(f"a whole number from 1 to {MOST}", _is_count)]
 Truth = Annotated[Any, _kind("true or false", lambda value: isinstance(value, bool))]
 Share = Annotated[Any, _kind("a number or false", lambda value: value is False or _is_number(value))]
 Value = Annotated[

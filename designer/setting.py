@@ -10,8 +10,8 @@ from designer.noting import Notes
 from designer.records import Condition, Dimension, Equation
 from designer.studyfile import Entry
 
+EQUATION = "->"  # stands among broken things for an equation; no condition can have this name
 RESERVED = ("time", "temperature", "rate", *expressions.FUNCTIONS)
-_NAME = r"[^\W\d]\w*"
 
 
 @dataclass(frozen=True)
@@ -53,6 +53,7 @@ def _one_equation(notes: Notes, entry: Entry, name: str) -> Equation | None:
     except reactions.EquationError as reason:
         expected = 'an equation such as "ester + 2 hydroxide -> acid + phenol"'
         notes.problem(entry.where, str(reason), expected=expected)
+        notes.broken.add(EQUATION)
         return None
 
 
@@ -101,8 +102,9 @@ def _conditions(notes: Notes, root: Entry, species: set[str]) -> tuple[Condition
         advice = f"Add [conditions] with the starting concentrations, such as {example}"
         notes.missing(root, "conditions", "no conditions: a run must start from something", advice)
         return ()
-    found = [_condition(notes, name, inner, name in species) for name, inner in entry.items()]
-    return tuple(condition for condition in found if condition is not None)
+    found = {name: _condition(notes, name, inner, name in species) for name, inner in entry.items()}
+    notes.broken |= {name for name, condition in found.items() if condition is None}
+    return tuple(condition for condition in found.values() if condition is not None)
 
 
 def _condition(notes: Notes, name: str, entry: Entry, is_species: bool) -> Condition | None:

@@ -209,6 +209,8 @@ def conditions_at(notes: Notes, entry: Entry | None, scene: Scene) -> dict[str, 
     found: dict[str, float] = {}
     known = {condition.name: condition for condition in scene.conditions}
     for name, inner in entry.items() if entry is not None else ():
+        if name not in known and notes.excused(name):
+            continue
         if name not in known:
             notes.problem(inner.where, f"'{name}' is no condition of this study", advice=near(name, known))
             continue
@@ -239,6 +241,8 @@ def from_half_life(
     temperature = at.get("temperature")
     values = {c.name: float(plainlaw.at_temperature(c, temperature)) for c in others}
     start = halflife.Start(steps, {**scene.known, **bare, **values}, concentrations)
+    if start.amount <= 0 and notes.excused(start.reactant):
+        return None
     if start.amount <= 0:
         message = f"'{start.reactant}' is not there at the start, so it has no half-life"
         notes.problem(inner.where, message, advice=f"Give {start.reactant} in `at` or in [conditions]")
@@ -281,7 +285,9 @@ def _unreachable(
     time_unit: str,
 ) -> tuple[str, str, str, str, str]:
     wanted = units.show(time, time_unit)
-    advice = f"Give {name} as a value with give_or_take, or lower conversion at a time as a pilot"
+    advice = (
+        f"Give {name} as a value with give_or_take; a conversion that was seen can stand beside it as a pilot"
+    )
     if reason.left is not None:
         message = f"under '{candidate}' the {start.reactant} never falls to half at these conditions"
         return (

@@ -103,6 +103,9 @@ def parse(text: str, name: str = FILE_NAME) -> Raw:
         raise StudyFileError(
             [Problem("", "brackets nest too deeply", advice="Flatten the tables")], name
         ) from None
+    except ValueError:  # the one kind that is no TOMLDecodeError: digits beyond what Python converts
+        advice = "Shorten the longest number"
+        raise StudyFileError([Problem("", "a number of thousands of digits", advice=advice)], name) from None
     problems, dropped = _misfits(table)
     return Raw(Entry("", table), text, name, tuple(problems), frozenset(dropped))
 
@@ -158,13 +161,15 @@ def _misfit(table: dict[str, Any], keys: tuple[int | str, ...], error: Any) -> P
         "model_attributes_type": "a table",
     }
     expected = kinds.get(error["type"], error["msg"])
-    advice = _list_advice(keys) if error["type"] == "list_type" else ""
+    advice = _brackets_advice(keys, error["type"], found)
     return Problem(_path(keys), "the wrong kind of value", _shown(found), expected, advice)
 
 
-def _list_advice(keys: tuple[int | str, ...]) -> str:
-    if len(keys) == 1 and keys[0] != "floors":
+def _brackets_advice(keys: tuple[int | str, ...], kind: str, found: Any) -> str:
+    if len(keys) == 1 and kind == "list_type" and isinstance(found, dict):
         return f"Write [[{keys[0]}]] with two pairs of brackets"
+    if len(keys) == 1 and isinstance(found, list):
+        return f"Write [{keys[0]}] with one pair of brackets, once"
     return ""
 
 
