@@ -159,7 +159,7 @@ def _moments(law: Candidate, middle: Middle) -> tuple[float, float]:
     free = [c for c in law.constants if c.belief.family != "exact"]
     count = NODES if NODES ** len(free) <= MOST_POINTS else 3
     x, w = np.polynomial.hermite_e.hermegauss(count)
-    points = np.array(list(product(x, repeat=len(free)))).reshape(-1, len(free))
+    points = np.array(list(product(x, repeat=len(free)))).reshape(count ** len(free), len(free))
     weight = np.array([np.prod(p) for p in product(w / w.sum(), repeat=len(free))])
     values: dict[str, object] = dict(middle.constants(law))
     for place, constant in enumerate(free):

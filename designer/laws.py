@@ -254,7 +254,7 @@ class Reader:
         if len(by_half_life) > 1:
             message = f"'{name}' gives {' and '.join(by_half_life)} by a half-life; one at most can be"
             self.notes.problem(wanted[by_half_life[1]].where, message, advice="Give the others as values")
-        elif by_half_life and len(found) == len(wanted) - 1:
+        elif by_half_life and len(found) == len(wanted) - 1 and self._complete(steps, wanted):
             key = by_half_life[0]
             constant = self._by_half_life(key, wanted[key], deduction.dimension(key), steps, found, name)
             if constant is not None:

@@ -13,9 +13,9 @@ _TABLES: tuple[tuple[str, str, type[schema.Table]], ...] = (
     ),
     (
         "`[conditions]`",
-        "One key for each. A condition that occurs in an equation is a species, given as a concentration; any other "
-        "(catalyst, pressure) keeps its own unit and is used bare. `temperature` is a condition too. A bare "
-        "value is fixed; otherwise a table of these keys:",
+        "One key for each. A condition that occurs in an equation is a species, given as a concentration; "
+        "any other (catalyst, pressure) keeps its own unit and is used bare. `temperature` is a condition too. "
+        "A bare value is fixed; otherwise a table of these keys:",
         schema.ConditionTable,
     ),
     (
@@ -25,8 +25,8 @@ _TABLES: tuple[tuple[str, str, type[schema.Table]], ...] = (
     ),
     (
         "A constant",
-        "A bare value is exact. Otherwise a table with one of these sets of keys: `value` and `give_or_take`; "
-        "`value` and `within`; `low` and `high`; `uniform`; `half_life` and `give_or_take`.",
+        "A bare value is exact. Otherwise a table with one of these sets of keys: `value` and "
+        "`give_or_take`; `value` and `within`; `low` and `high`; `uniform`; `half_life` and `give_or_take`.",
         schema.ConstantTable,
     ),
     ("`activation_energy`", "A bare value is exact; a belief is normal.", schema.EnergyTable),
@@ -67,18 +67,20 @@ a report is 95 %.
 | given | distribution |
 |---|---|
 | `value`, `give_or_take` | log-normal: median `value`, 90 % between `value`/factor and `value`*factor |
-| `value`, `within` | normal, 90 % between `value` - `within` and `value` + `within`; cut at 0 where `value` is above 0 |
-| `low`, `high` | 5 and 95 % points of a log-normal; for an order (a constant in an exponent) of a normal, cut at 0; \
-with `fraction = true` of a logit-normal |
+| `value`, `within` | normal, 90 % between `value` - `within` and `value` + `within`; \
+cut at 0 where `value` is above 0 |
+| `low`, `high` | 5 and 95 % points of a log-normal; for an order (a constant in an exponent) \
+of a normal, cut at 0; with `fraction = true` of a logit-normal |
 | `uniform` | every value between the two ends alike |
-| `half_life`, `give_or_take` | log-normal, from the half-life of the whole law at `at`, its other constants at their middles |
+| `half_life`, `give_or_take` | log-normal, from the half-life of the whole law at `at`, \
+its other constants at their middles |
 | a value alone | exact |
 
 Conditions that `at` leaves out stand at their fixed value or at the middle of their range. A law under
 which the reactant cannot fall to half, or not within the whole 90 % range, is refused with the number.
 
-The free-order alternative, `r0*product of ([X]/x_ref)^n_X`, is added to studies of one reaction and takes 5 % of the
-belief; the listed candidates share the rest in the ratios given.
+The free-order alternative, `r0*product of ([X]/x_ref)^n_X`, is added to studies of one reaction and takes 5 %
+of the belief; the listed candidates share the rest in the ratios given.
 
 ## Units
 
