@@ -16,19 +16,21 @@ Axis order everywhere: draw, run, time, signal; coordinates last.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from functools import partial
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 
 from designer import arrays
 from designer.arrays import Array, jax, jnp
-from designer.likelihood import Design, Readings, RunTerms, loss, run_terms
+from designer.likelihood import Design, Readings, RunTerms, loss, reading_losses, run_terms
 from designer.signals import Law, Signal
 
 LONGEST_STEP = 1.5  # in structural coordinates, so in prior standard deviations
 CONVERGED = 1e-6  # decrement at which a fit stops
-MOST_STEPS = 30
+STEPS = 6  # of a batch, after which those that need more are gathered
+MOST_ROUNDS = 6
 LANES = 256  # data sets a compiled batch holds
 DIFFERENCE = 1e-4  # step of central differences where the Hessian is formed from gradients
 
@@ -96,6 +98,17 @@ def quadratic(law: Law, point: Point, design: Design, readings: Readings, exact:
     return blocks(terms.hessian), blocks(terms.gauss_newton), terms.trouble.max()
 
 
+def total_loss(law: Law, point: Point, design: Design, readings: Readings) -> Array:
+    """F at a point of one data set, without derivatives."""
+
+    def run(z: Array, one: Design, read: Readings) -> Array:
+        signal = law.read(point.u, z, one.conditions, one.times)
+        return reading_losses(law, signal, read, one.mask).sum()
+
+    prior = (point.u**2).sum() / 2 + (point.z**2).sum() / 2
+    return prior + jax.vmap(run)(point.z, design, readings).sum()
+
+
 def eliminate(q: Quadratic, damping: Array | float = 0.0, free: Array | None = None) -> Factor:
     """Newton step -H^-1 g and ln det H by elimination of each run's block.
 
@@ -141,58 +154,97 @@ def _inverse(lower: arrays.Matrix, size: int) -> Array:
     return jnp.stack([jnp.stack(column) for column in columns]) if size else jnp.zeros((0, 0))
 
 
-class _State(NamedTuple):
-    point: Point
+class State(NamedTuple):
+    """Where a fit stands: the best point so far with F there, the point to be tried next, damping,
+    decrement (expected fall of F still left), and whether it is over."""
+
+    best: Point
     exact: Quadratic
     safe: Quadratic  # Gauss-Newton
     trouble: Array
+    trial: Point
     damping: Array
     decrement: Array
     done: Array
 
 
-def _begin(law: Law, point: Point, design: Design, readings: Readings) -> _State:
-    exact, safe, trouble = quadratic(law, point, design, readings, law.second_order)
-    return _State(point, exact, safe, trouble, jnp.asarray(1e-2), jnp.asarray(jnp.inf), jnp.asarray(False))
+def _blank(law: Law, start: Point) -> State:
+    """A fit about to begin: nothing is known, so that whatever the start gives is an improvement."""
+    d, (runs, p) = len(law.structural), start.z.shape
+    zeros = Quadratic(
+        jnp.asarray(jnp.inf),
+        jnp.zeros(d),
+        jnp.zeros((runs, p)),
+        jnp.eye(d),
+        jnp.zeros((runs, d, p)),
+        jnp.broadcast_to(jnp.eye(p), (runs, p, p)),
+    )
+    nothing = jnp.asarray(jnp.inf)
+    return State(start, zeros, zeros, jnp.asarray(1.0), start, jnp.asarray(1e-1), nothing, jnp.asarray(False))
 
 
-def _step(law: Law, state: _State, design: Design, readings: Readings, free: Array) -> _State:
-    """One damped Newton step, Gauss-Newton where H is not positive; kept only if F falls."""
-    exact, safe = eliminate(state.exact, state.damping, free), eliminate(state.safe, state.damping, free)
-    use = exact.pivot > 1e-6
-    du = jnp.where(use, exact.u, safe.u)
-    dz = jnp.where(use, exact.z, safe.z)
-    decrement = -(jnp.sum(state.exact.u * du) + jnp.sum(state.exact.z * dz)) / 2
-    largest = jnp.maximum(jnp.max(jnp.abs(du), initial=0.0), jnp.max(jnp.abs(dz), initial=0.0) / 2)
-    shrink = jnp.minimum(1.0, LONGEST_STEP / jnp.maximum(largest, 1e-12))
-    trial = Point(state.point.u + shrink * du, state.point.z + shrink * dz)
-    exact_t, safe_t, trouble_t = quadratic(law, trial, design, readings, law.second_order)
-    better = exact_t.value <= state.exact.value + 1e-9 * (1 + jnp.abs(state.exact.value))
-    better = better & (trouble_t == 0)
-    converged = (decrement < CONVERGED) & better & (state.damping < 0.1)
-    stalled = state.damping > 1e7
+def _step(law: Law, state: State, design: Design, readings: Readings, free: Array) -> State:
+    """Look at the trial point, keep it if F falls, and propose the next: a damped Newton step, with
+    Gauss-Newton's matrix where H is not positive."""
+    exact, safe, trouble = quadratic(law, state.trial, design, readings, law.second_order)
+    fresh = (state.trial, exact, safe, trouble)
+    old = (state.best, state.exact, state.safe, state.trouble)
+    tolerance = 1e-9 * (1 + jnp.abs(exact.value))
+    better = (exact.value <= state.exact.value + tolerance) & (trouble == 0)
+    best, exact, safe, trouble = jax.tree.map(lambda a, b: jnp.where(better, a, b), fresh, old)
     damping = jnp.where(better, jnp.maximum(state.damping * 0.1, 1e-9), state.damping * 8)
-    after = _State(trial, exact_t, safe_t, trouble_t, damping, decrement, converged)
-    kept = state._replace(damping=damping, decrement=decrement, done=stalled)
-    new = jax.tree.map(lambda a, b: jnp.where(better, a, b), after, kept)
-    return jax.tree.map(lambda old, fresh: jnp.where(state.done, old, fresh), state, new)
+    positive = eliminate(exact, 0.0, free).pivot > 1e-6
+    matrix = jax.tree.map(lambda a, b: jnp.where(positive, a, b), exact, safe)
+    move = eliminate(matrix, damping, free)
+    decrement = -(jnp.sum(exact.u * free * move.u) + jnp.sum(exact.z * move.z)) / 2
+    settled = (state.decrement < CONVERGED) & better
+    largest = jnp.maximum(jnp.max(jnp.abs(move.u), initial=0.0), jnp.max(jnp.abs(move.z), initial=0.0) / 2)
+    shrink = jnp.minimum(1.0, LONGEST_STEP / jnp.maximum(largest, 1e-12))
+    trial = Point(best.u + shrink * move.u, best.z + shrink * move.z)
+    done = settled | (damping > 1e7)
+    after = State(best, exact, safe, trouble, trial, damping, decrement, done)
+    return jax.tree.map(lambda a, b: jnp.where(state.done, a, b), state, after)
 
 
-def _minimise(
-    law: Law, start: Point, design: Design, readings: Readings, free: Array, most: int
-) -> _State:
-    """Batched Newton-Levenberg; design shared by all data sets."""
-    begin = jax.vmap(partial(_begin, law), in_axes=(0, None, 0))
+def _advance(
+    law: Law, state: State, design: Design, readings: Readings, free: Array
+) -> tuple[State, Fit]:
+    """Up to STEPS steps of every data set (leading axis of state, readings, free); one design for all."""
     step = jax.vmap(partial(_step, law), in_axes=(0, None, 0, 0))
 
-    def going(carry: tuple[Array, _State]) -> Array:
-        return (carry[0] < most) & ~jnp.all(carry[1].done)
+    def going(carry: tuple[Array, State]) -> Array:
+        return (carry[0] < STEPS) & ~jnp.all(carry[1].done)
 
-    def advance(carry: tuple[Array, _State]) -> tuple[Array, _State]:
+    def onward(carry: tuple[Array, State]) -> tuple[Array, State]:
         return carry[0] + 1, step(carry[1], design, readings, free)
 
-    state = begin(start, design, readings)
-    return jax.lax.while_loop(going, advance, (jnp.asarray(0), state))[1]
+    state = jax.lax.while_loop(going, onward, (jnp.asarray(0), state))[1]
+    return state, jax.vmap(_laplace)(state, state.exact, free)
+
+
+def _laplace(state: State, exact: Quadratic, free: Array) -> Fit:
+    """Log evidence from the best point; Gauss-Newton's determinant where H is not positive."""
+    factor = eliminate(exact, 0.0, free)
+    good = factor.pivot > 0
+    safe = eliminate(state.safe, 0.0, free)
+    log_determinant = jnp.where(good, factor.log_determinant, safe.log_determinant)
+    decrement = jnp.where(good, jnp.abs(state.decrement), jnp.inf)
+    return Fit(
+        state.best.u,
+        state.best.z,
+        -exact.value - log_determinant / 2,
+        exact.value,
+        decrement,
+        factor.pivot,
+        jnp.where(good, factor.covariance, safe.covariance),
+        state.trouble,
+    )
+
+
+def _exactly(law: Law, state: State, design: Design, readings: Readings, free: Array) -> Fit:
+    """Laplace with the Hessian from differences of the gradient, for laws without cheap second derivatives."""
+    exact = jax.vmap(partial(hessian_by_differences, law), in_axes=(0, None, 0))(state.best, design, readings)
+    return jax.vmap(_laplace)(state, exact, free)
 
 
 def hessian_by_differences(law: Law, point: Point, design: Design, readings: Readings) -> Quadratic:
@@ -217,23 +269,6 @@ def hessian_by_differences(law: Law, point: Point, design: Design, readings: Rea
     return base._replace(uu=uu, uz=h[:, :structural, structural:], zz=zz)
 
 
-def _finish(law: Law, state: _State, design: Design, readings: Readings, free: Array) -> Fit:
-    exact = state.exact
-    if not law.second_order:
-        exact = hessian_by_differences(law, state.point, design, readings)
-    factor = eliminate(exact, 0.0, free)
-    good = factor.pivot > 0
-    safe = eliminate(state.safe, 0.0, free)
-    log_determinant = jnp.where(good, factor.log_determinant, safe.log_determinant)
-    decrement = -(jnp.sum(exact.u * free * factor.u) + jnp.sum(exact.z * factor.z)) / 2
-    decrement = jnp.where(good, jnp.abs(decrement), jnp.inf)
-    log_evidence = -exact.value - log_determinant / 2
-    covariance = jnp.where(good, factor.covariance, safe.covariance)
-    return Fit(
-        state.point.u, state.point.z, log_evidence, exact.value, decrement, factor.pivot, covariance, state.trouble
-    )
-
-
 def scan(law: Law, design: Design, readings: Readings, nodes: Array) -> Array:
     """F without run errors at structural ``nodes`` (node, structural) for every data set: (draw, node).
 
@@ -256,31 +291,22 @@ def scan(law: Law, design: Design, readings: Readings, nodes: Array) -> Array:
 
 class Kernel:
     """Compiled evidence of one candidate. Batches of any size are cut into padded lanes, so that one
-    compilation serves them all."""
+    compilation serves them all; data sets that need more steps than most are gathered and run on."""
 
     def __init__(self, law: Law, lanes: int = LANES) -> None:
         self.law = law
         self.lanes = lanes
         self.nodes = scan_nodes(len(law.structural))
-        self._cold = jax.jit(self._fit_cold)
-        self._warm = jax.jit(self._fit_warm)
         self._scan = jax.jit(partial(scan, law))
-
-    def _fit_cold(self, design: Design, readings: Readings, nodes: Array) -> Fit:
-        at = scan(self.law, design, readings, nodes)
-        u = nodes[jnp.argmin(at, axis=1)]
-        z = jnp.zeros((u.shape[0], design.times.shape[0], len(self.law.errors)))
-        return self._fit_warm(design, readings, Point(u, z), jnp.ones_like(u))
-
-    def _fit_warm(self, design: Design, readings: Readings, start: Point, free: Array) -> Fit:
-        state = _minimise(self.law, start, design, readings, free, MOST_STEPS)
-        finish = jax.vmap(partial(_finish, self.law), in_axes=(0, None, 0, 0))
-        return finish(state, design, readings, free)
+        self._advance = jax.jit(partial(_advance, law))
+        self._exactly = jax.jit(partial(_exactly, law))
+        self._blank = jax.vmap(partial(_blank, law))
 
     def best_nodes(self, design: Design, readings: Readings, count: int) -> np.ndarray:
         """The ``count`` best structural nodes of every data set: (draw, count, structural)."""
-        at = np.asarray(self._scan(design, readings, self.nodes))
-        order = np.argsort(at, axis=1)[:, :count]
+        total = np.shape(readings.values)[0]
+        at = [np.asarray(self._scan(design, _some(readings, rows), self.nodes)) for rows in self._lanes(total)]
+        order = np.argsort(np.concatenate(at)[:total], axis=1)[:, :count]
         return np.asarray(self.nodes)[order]
 
     def fit(
@@ -288,27 +314,51 @@ class Kernel:
         design: Design,
         readings: Readings,
         start: Point | None = None,
-        free: Array | None = None,
+        free: np.ndarray | None = None,
     ) -> Fit:
         """Fit every data set of ``readings`` (draw, run, time, signal); arrays of the result are numpy.
 
         start: warm start of each data set; without it the structural nodes are scanned. free (draw,
         structural) is 1 for structural coordinates that move and 0 for those held at the start.
         """
-        if start is not None and free is None:
-            free = np.ones_like(start.u)
         count = np.shape(readings.values)[0]
+        if start is None:
+            u = self.best_nodes(design, readings, 1)[:, 0]
+            start = Point(u, np.zeros((count, len(design.times), len(self.law.errors))))
+        free = np.ones_like(start.u) if free is None else np.asarray(free)
+        state, fit = self._run(design, readings, free, self._blank(start))
+        for _ in range(MOST_ROUNDS - 1):
+            rest = np.flatnonzero(~state.done)
+            if len(rest) == 0:
+                break
+            more = self._run(design, _some(readings, rest), free[rest], _some(state, rest))
+            for whole, part in zip(jax.tree.leaves((state, fit)), jax.tree.leaves(more), strict=True):
+                whole[rest] = part
+        if not self.law.second_order:
+            fit = self._in_lanes(self._exactly, state, design, readings, free)
+        return fit
+
+    def _run(self, design: Design, readings: Readings, free: np.ndarray, state: State) -> tuple[State, Fit]:
+        return self._in_lanes(self._advance, state, design, readings, free)
+
+    def _in_lanes(
+        self, function: Callable, state: State, design: Design, readings: Readings, free: np.ndarray
+    ) -> Any:
+        count = len(free)
         parts = []
-        for begin in range(0, count, self.lanes):
-            rows = np.minimum(np.arange(begin, begin + self.lanes), count - 1)
-            some = Readings(*(np.asarray(x)[rows] for x in readings))
-            if start is None:
-                fit = self._cold(design, some, self.nodes)
-            else:
-                begin_at = Point(*(np.asarray(x)[rows] for x in start))
-                fit = self._warm(design, some, begin_at, np.asarray(free)[rows])
-            parts.append([np.asarray(x)[: count - begin] for x in fit])
-        return Fit(*(np.concatenate(column) for column in zip(*parts, strict=True)))
+        for rows in self._lanes(count):
+            parts.append(function(_some(state, rows), design, _some(readings, rows), free[rows]))
+        joined = jax.tree.map(lambda *x: np.concatenate([np.asarray(y) for y in x])[:count], *parts)
+        return joined
+
+    def _lanes(self, count: int) -> list[np.ndarray]:
+        """Rows of each padded batch; the last one repeats the last data set."""
+        begins = range(0, max(count, 1), self.lanes)
+        return [np.minimum(np.arange(begin, begin + self.lanes), count - 1) for begin in begins]
+
+
+def _some(tree: Any, rows: np.ndarray) -> Any:
+    return jax.tree.map(lambda x: np.asarray(x)[rows], tree)
 
 
 def scan_nodes(size: int) -> Array:

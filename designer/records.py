@@ -279,10 +279,17 @@ class Study:
 
 @dataclass(frozen=True)
 class Run:
-    """One run of a plan: conditions in the order of ``Study.conditions``, times of samples in s."""
+    """One run of a plan: conditions in the order of ``Study.conditions``, times of samples in s,
+    and the length in s of a run that is recorded continuously (None where samples are taken)."""
 
     conditions: tuple[tuple[str, float], ...]
     times: tuple[float, ...]
+    length: float | None = None
+
+    @property
+    def end(self) -> float:
+        """When the run is over, s."""
+        return max((*self.times, self.length or 0.0))
 
 
 @dataclass(frozen=True)

@@ -27,6 +27,7 @@ from designer.arrays import FUNCTIONS, Array, jax, jnp
 from designer.records import Z90, Candidate, Constant, Reading, RunErrors, Study
 
 GAS_CONSTANT = 8.31446261815324  # J/(mol K), exact since the 2019 SI
+ROOM = 298.15  # K, where a study states no temperature (nothing then depends on it)
 TINY_VARIANCE = 1e-30  # keeps the logarithm finite where a study states no absolute error
 
 
@@ -55,6 +56,7 @@ class Law:
     errors: tuple[str, ...]
     channels: tuple[Channel, ...]
     read: Callable[[Array, Array, Array, Array], Signal]
+    concentrations: Callable[[Array, Array, Array, Array], dict[str, Array]]  # arguments as read's
     constants: Callable[[Array, Array], dict[str, Array]]  # (u, temperature) -> values
     second_order: bool
     path: str
@@ -93,8 +95,23 @@ def law(study: Study, candidate: Candidate) -> Law:
     scope = frozenset(c.name for c in study.conditions if not c.is_species) | frozenset(dict(study.constants))
     path = trajectories.choose(candidate, scope)
     constants = _constants(candidate, structural)
-    read = _reader(study, candidate, structural, errors, columns, path, constants)
-    return Law(candidate, structural, errors, columns, read, constants, path.second_order, path.name)
+    solve = _solver(study, candidate, structural, errors, path, constants)
+    read = _reader(study, candidate, structural, columns, solve)
+
+    def concentrations(u: Array, z: Array, conditions: Array, times: Array) -> dict[str, Array]:
+        return solve(u, z, conditions, times).now
+
+    return Law(
+        candidate,
+        structural,
+        errors,
+        columns,
+        read,
+        concentrations,
+        constants,
+        path.second_order,
+        path.name,
+    )
 
 
 def _structural(study: Study, candidate: Candidate) -> tuple[str, ...]:
@@ -148,45 +165,69 @@ def _constants(
     return values
 
 
-def _reader(
+class _Course(NamedTuple):
+    """A run as it really went: what the signals are made of."""
+
+    values: dict[str, Array]
+    start: dict[str, Array]
+    now: dict[str, Array]
+    rates: tuple[Array, ...]
+    factor: Array
+    clock: Array
+    error: Callable[[str, float], Array]
+    trouble: Array
+
+
+def _solver(
     study: Study,
     candidate: Candidate,
     structural: tuple[str, ...],
     errors: tuple[str, ...],
-    columns: tuple[Channel, ...],
     path: trajectories.Path,
     constants: Callable[[Array, Array], dict[str, Array]],
-) -> Callable[[Array, Array, Array, Array], Signal]:
+) -> Callable[[Array, Array, Array, Array], _Course]:
     stated = study.run_errors
     shared = {name: index for index, name in enumerate(structural)}
     own = {name: index for index, name in enumerate(errors)}
     everything = _all_species(study)
 
-    def read(u: Array, z: Array, conditions: Array, times: Array) -> Signal:
+    def solve(u: Array, z: Array, conditions: Array, times: Array) -> _Course:
         def error(name: str, size: float) -> Array:
             return size * z[own[name]] if name in own else jnp.zeros(())
 
         values, start = _prepared(study, conditions, u, shared, error)
-        values["temperature"] = values.get("temperature", jnp.asarray(298.15)) + error(
-            "temperature", stated.temperature
-        )
-        values.update(constants(u, values["temperature"]))
+        temperature = values.get("temperature", jnp.asarray(ROOM)) + error("temperature", stated.temperature)
+        values["temperature"] = temperature
+        values.update(constants(u, temperature))
         start = {name: start.get(name, jnp.zeros(())) for name in everything}
         clock = jnp.maximum(times + error("time zero", stated.time_zero), 0.0)
         factor = jnp.exp(error("rate", stated.rate))
         curve = path.solve(values, start, factor, clock)
         now = {name: curve.concentrations.get(name, start[name] + 0 * clock) for name in everything}
-        parts = [
-            _one_signal(column, candidate, values, start, now, clock, curve.rates, factor)
-            for column in columns
-        ]
-        instrument = [
-            _instrument(column.reading, stated, mean, slope, error, _noise(column.reading, u, shared))
-            for column, (mean, slope) in zip(columns, parts, strict=True)
-        ]
-        mean = jnp.stack([m for m, _ in instrument], axis=-1)
-        variance = jnp.stack([v for _, v in instrument], axis=-1)
-        return Signal(mean, variance, curve.trouble)
+        return _Course(values, start, now, curve.rates, factor, clock, error, curve.trouble)
+
+    return solve
+
+
+def _reader(
+    study: Study,
+    candidate: Candidate,
+    structural: tuple[str, ...],
+    columns: tuple[Channel, ...],
+    solve: Callable[[Array, Array, Array, Array], _Course],
+) -> Callable[[Array, Array, Array, Array], Signal]:
+    shared = {name: index for index, name in enumerate(structural)}
+
+    def read(u: Array, z: Array, conditions: Array, times: Array) -> Signal:
+        course = solve(u, z, conditions, times)
+        means, variances = [], []
+        for column in columns:
+            mean, slope = _one_signal(column, candidate, course)
+            noise = _noise(column.reading, u, shared)
+            mean, variance = _instrument(column.reading, study.run_errors, mean, slope, course.error, noise)
+            means.append(mean)
+            variances.append(variance)
+        return Signal(jnp.stack(means, axis=-1), jnp.stack(variances, axis=-1), course.trouble)
 
     return read
 
@@ -228,36 +269,29 @@ def _noise(reading: Reading, u: Array, shared: dict[str, int]) -> Array | float:
     return jnp.exp(u[index] * log(reading.uncertain) / Z90)
 
 
-def _one_signal(
-    column: Channel,
-    candidate: Candidate,
-    values: dict[str, Array],
-    start: dict[str, Array],
-    now: dict[str, Array],
-    clock: Array,
-    rates: tuple[Array, ...],
-    factor: Array,
-) -> tuple[Array, Array]:
+def _one_signal(column: Channel, candidate: Candidate, course: _Course) -> tuple[Array, Array]:
     """Mean signal before the errors of the instrument, and its slope in time (signal/s)."""
-    reading = column.reading
+    reading, clock, now = column.reading, course.clock, course.now
     change = {name: jnp.zeros_like(clock) for name in now}
-    for step, rate in zip(candidate.steps, rates, strict=True):
+    for step, rate in zip(candidate.steps, course.rates, strict=True):
         for name, number in step.equation.stoichiometry:
             change[name] = change[name] + number * rate
 
-    def signal(at: dict[str, Array], time: Array, rate: Array) -> Array:
-        scope = {**values, "time": time, "rate": rate}
-        return expressions.evaluate(reading.signal, scope, at, start, FUNCTIONS, jnp.power) + 0 * time
+    def value(node: expressions.Node, at: dict[str, Array], scope: dict[str, Array]) -> Array:
+        names = {**course.values, **scope}
+        return expressions.evaluate(node, names, at, course.start, FUNCTIONS, jnp.power) + 0 * clock
 
     def law_rate(at: dict[str, Array], time: Array) -> Array:
-        scope = {**values, "time": time}
-        rate = candidate.steps[0].rate
-        return factor * expressions.evaluate(rate, scope, at, start, FUNCTIONS, jnp.power) + 0 * time
+        return course.factor * value(candidate.steps[0].rate, at, {"time": time})
 
+    def signal(at: dict[str, Array], time: Array, rate: Array) -> Array:
+        return value(reading.signal, at, {"time": time, "rate": rate})
+
+    onward = jnp.ones_like(clock)
     turning = jnp.zeros_like(clock)
     if "rate" in expressions.names(reading.signal):
-        turning = jax.jvp(law_rate, (now, clock), (change, jnp.ones_like(clock)))[1]
-    return jax.jvp(signal, (now, clock, rates[0]), (change, jnp.ones_like(clock), turning))
+        turning = jax.jvp(law_rate, (now, clock), (change, onward))[1]
+    return jax.jvp(signal, (now, clock, course.rates[0]), (change, onward, turning))
 
 
 def _instrument(

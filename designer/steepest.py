@@ -1,0 +1,191 @@
+"""Gradient of the worth of a plan in its conditions and times, noise held fixed.
+
+G = (ln Z, ln variance of ln k) depends on the design x directly, through the simulated readings, and
+through the optimum p*(x) of F. With dF/dp = 0 there, the implicit function theorem gives
+
+    dG/dx = dG/dx at p*  -  dG/dp H^-1 d2F/dp dx
+
+the second term of which the envelope theorem would miss in ln det H. It is the derivative of one
+differentiable Newton step from where the fit stopped, and needs no third derivative of F in p and x
+together: H^-1 dG/dp is a fixed direction, and d2F/dp dx along it is the gradient of one directional
+derivative of F.
+"""
+
+from __future__ import annotations
+
+from functools import partial
+from typing import NamedTuple
+
+import numpy as np
+
+from designer import beliefs
+from designer.arrays import Array, jax, jnp
+from designer.evidence import Point, Quadratic, eliminate, quadratic, total_loss
+from designer.likelihood import Design, Readings
+from designer.signals import Law
+from designer.virtual import Bench, Scores, Truth, probabilities, readings_of, simulate
+
+NEGLIGIBLE = 1e-12  # weights below this are not differentiated
+LANES = 128
+
+
+class Worth(NamedTuple):
+    """value in 0..1-ish (see ``worth``) and its gradient in conditions and times of all runs."""
+
+    value: float
+    conditions: np.ndarray
+    times: np.ndarray
+
+
+def evidence_and_spread(
+    law: Law, asked: tuple[str, ...], point: Point, design: Design, readings: Readings
+) -> tuple[Array, Quadratic]:
+    """ln Z by Laplace at a fixed point, ln variance of each asked ln-constant (zero where the law has
+    none) and F's blocks at that point. Gauss-Newton's matrix for laws without cheap second derivatives."""
+    there, _, _ = quadratic(law, point, design, readings, law.second_order)
+    factor = eliminate(there)
+    log_evidence = -there.value - factor.log_determinant / 2
+    variances = []
+    for name in asked:
+        if name not in law.structural:
+            variances.append(jnp.zeros(()))
+            continue
+        place = law.structural.index(name)
+        slope = beliefs.log_slope(law.candidate.constant(name).belief, point.u[place])
+        variances.append(jnp.log(slope**2 * factor.covariance[place, place]))
+    return jnp.stack([log_evidence, *variances]), there
+
+
+@partial(jax.jit, static_argnums=(0, 1))
+def _pull_evidence(
+    law: Law, asked: tuple[str, ...], point: Point, design: Design, readings: Readings, weight: Array
+) -> tuple[Array, Array, Array]:
+    """Gradient of the sum of weight (draw, 1 + asked) times (ln Z, ln variances), in conditions, times
+    and values, the optimum moving with them."""
+
+    def one(at: Point, conditions: Array, times: Array, values: Array, side: Array, w: Array) -> Array:
+        moved = Design(conditions, times, design.mask)
+        terms, there = evidence_and_spread(law, asked, at, moved, Readings(values, side))
+        return (w * terms).sum(), there
+
+    def along(at: Point, way: Point, conditions: Array, times: Array, values: Array, side: Array) -> Array:
+        """dF/d(u, z) in the direction ``way``."""
+        moved = Design(conditions, times, design.mask)
+        objective = lambda p: total_loss(law, p, moved, Readings(values, side))  # noqa: E731
+        return jax.jvp(objective, (at,), (way,))[1]
+
+    def pull(at: Point, values: Array, side: Array, w: Array) -> tuple[Array, Array, Array]:
+        place = (design.conditions, design.times, values)
+        (pulled, *direct), there = jax.grad(one, argnums=(0, 1, 2, 3), has_aux=True)(at, *place, side, w)
+        way = eliminate(there._replace(u=pulled.u, z=pulled.z))
+        implied = jax.grad(along, argnums=(2, 3, 4))(at, Point(way.u, way.z), *place, side)
+        return tuple(a + b for a, b in zip(direct, implied, strict=True))
+
+    conditions, times, values = jax.vmap(pull)(point, readings.values, readings.side, weight)
+    return conditions.sum(0), times.sum(0), values
+
+
+@partial(jax.jit, static_argnums=0)
+def _pull_readings(law: Law, truth: Truth, design: Design, weight: Array) -> tuple[Array, Array]:
+    """Gradient of sum(weight * values) in conditions and times, of the simulated readings."""
+
+    def total(conditions: Array, times: Array) -> Array:
+        made = jax.vmap(lambda u, z, e: simulate(law, u, z, e, conditions, times))(*truth)
+        return (weight * made.values).sum()
+
+    return jax.grad(total, argnums=(0, 1))(design.conditions, design.times)
+
+
+def gradient(
+    bench: Bench,
+    design: Design,
+    truths: list[Truth],
+    scores: Scores,
+    weights: tuple[np.ndarray, np.ndarray],
+) -> tuple[np.ndarray, np.ndarray]:
+    """Gradient in conditions (run, condition) and times (run, time) of a worth whose derivatives in
+    log evidence (study, listed) and in ln variance of asked constants (study, asked) are ``weights``."""
+    d_evidence, d_spread = weights  # (study, listed), (study, asked)
+    readings = readings_of(bench, design, truths)
+    asked = tuple(name for name, _ in bench.asked)
+    conditions, times = np.zeros_like(design.conditions), np.zeros_like(design.times)
+    d_values = np.zeros_like(readings.values)
+    for row, index in enumerate(bench.listed):
+        law, fit = bench.laws[index], scores.fits[row]
+        own = (scores.truth == row)[:, None] * d_spread
+        usable = (fit.pivot > 0) & (fit.trouble == 0) & np.isfinite(fit.log_evidence)
+        active = usable & ((np.abs(d_evidence[:, row]) > NEGLIGIBLE) | (np.abs(own).max(1, initial=0) > 0))
+        rows = np.flatnonzero(active)
+        for begin in range(0, len(rows), LANES):
+            some = np.resize(rows[begin : begin + LANES], LANES)
+            alive = (np.arange(LANES) < len(rows) - begin).astype(float)
+            weight = np.concatenate([d_evidence[some, row, None], own[some]], axis=1) * alive[:, None]
+            at = Point(fit.u[some], fit.z[some])
+            read = Readings(readings.values[some], readings.side[some])
+            pulled = _pull_evidence(law, asked, at, design, read, weight)
+            conditions += np.asarray(pulled[0])
+            times += np.asarray(pulled[1])
+            d_values[some[alive > 0]] += np.asarray(pulled[2])[alive > 0]
+    _through_readings(bench, design, truths, scores, d_values, readings, conditions, times)
+    return conditions, times
+
+
+def _through_readings(
+    bench: Bench,
+    design: Design,
+    truths: list[Truth],
+    scores: Scores,
+    d_values: np.ndarray,
+    readings: Readings,
+    conditions: np.ndarray,
+    times: np.ndarray,
+) -> None:
+    """Add what the design does through the simulated readings (carried runs do not move)."""
+    carried = len(bench.axes.carried.times)
+    weight = np.where(readings.side == 0, d_values, 0.0) * design.mask
+    weight[:, :carried] = 0.0
+    for row, index in enumerate(bench.listed):
+        mine = scores.truth == row
+        pulled = _pull_readings(bench.laws[index], truths[row], design, weight[mine])
+        conditions += np.asarray(pulled[0])
+        times += np.asarray(pulled[1])
+
+
+def worth(bench: Bench, scores: Scores) -> tuple[float, np.ndarray, np.ndarray, np.ndarray]:
+    """What the search climbs, and its derivatives.
+
+    worth = w I/H0 - (1 - w) E[ln(1 + (half-width/asked)^2)/2]
+
+    with I/H0 the expected information about which law holds as a share of what is to be known, and w
+    ``weight_on_law``. The second term is flat once the half-width is well below what is asked and
+    falls like its logarithm above. Returns worth, its value in each study (weighted so that they sum to
+    it), and derivatives in log evidence and ln variance.
+    """
+    odds = bench.odds
+    counts = np.bincount(scores.truth, minlength=len(odds))
+    share = odds[scores.truth] / counts[scores.truth]
+    p = probabilities(bench, scores.log_evidence)
+    rows = np.arange(len(p))
+    entropy = -(odds * np.log(odds)).sum()
+    on_law = bench.study.aim.weight_on_law if bench.asked else 1.0
+    if entropy < 1e-12:
+        on_law = 0.0
+    scale = on_law / max(entropy, 1e-12)
+    own = p[rows, scores.truth]
+    told = scale * (np.log(np.maximum(own, 1e-300)) + entropy)
+    d_evidence = -scale * share[:, None] * p
+    d_evidence[rows, scores.truth] += scale * share
+    loss, d_spread = _precision(bench, scores, share)
+    each = share * told - (1 - on_law) * loss
+    return float(each.sum()), each, d_evidence, -(1 - on_law) * d_spread
+
+
+def _precision(bench: Bench, scores: Scores, share: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Weighted loss of precision of each study and its derivative in ln variance (study, asked)."""
+    if not bench.asked:
+        return np.zeros(len(share)), np.zeros((len(share), 0))
+    has = np.isfinite(scores.half_width)
+    total = np.maximum((share[:, None] * has).sum(0), 1e-300)  # laws without the constant do not count
+    ratio = np.where(has, scores.half_width / np.array([width for _, width in bench.asked]), 0.0) ** 2
+    part = share[:, None] * has / total / len(bench.asked)
+    return (part * np.log1p(ratio) / 2).sum(1), part * ratio / (1 + ratio) / 2
