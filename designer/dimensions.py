@@ -104,13 +104,18 @@ class Deduction:
         difference = self.reduced(left.plus(right, Fraction(-1)))
         if not difference.unknown:
             if any(difference.known):
-                words = [self.in_words(left), self.in_words(right)]
-                self.clashes.append(Clash(part, message.format(*words), advice))
+                self.clashes.append(Clash(part, self._message(message, left, right, difference), advice))
             return
         name, factor = next(iter(difference.unknown.items()))
         rest = Form(difference.known, {n: f for n, f in difference.unknown.items() if n != name})
         value = rest.times(-1 / factor)
         self.solved = {n: self._with(f, name, value) for n, f in self.solved.items()} | {name: value}
+
+    def _message(self, message: str, left: Form, right: Form, difference: Form) -> str:
+        if self.reduced(left).unknown:  # neither has a unit of its own yet, yet they cannot be alike
+            factor = units.dimension_words(difference.dimension or units.NONE)
+            return f"its parts differ by a factor of {factor}, whatever the constants are"
+        return message.format(self.in_words(left), self.in_words(right))
 
     @staticmethod
     def _with(found: Form, name: str, value: Form) -> Form:

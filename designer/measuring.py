@@ -65,11 +65,9 @@ def _dimension(
     entry: Entry,
     node: expressions.Node,
 ) -> Dimension | None:
-    """Dimension of the signal; its names must be known to every candidate."""
+    """Dimension of the signal. Its names are known numbers: it must mean the same under every law."""
     known = dict(setting.bare)
-    for constant in listed[0].constants if listed else ():
-        if all(constant.name in {c.name for c in candidate.constants} for candidate in listed):
-            known[constant.name] = constant.dimension
+    unknowns = {constant.name for candidate in listed for constant in candidate.constants}
     if len(setting.equations) == 1:
         (equation,) = setting.equations.values()
         known["rate"] = rate_dimension(equation, setting.species)
@@ -82,6 +80,12 @@ def _dimension(
         elif name == "rate":
             message = "which step's rate? the study has several"
             notes.problem(entry.where, message, advice="Write the signal with concentrations")
+        elif name in unknowns:
+            message = f"'{name}' is an unknown of a candidate, and a signal must mean the same under all"
+            advice = (
+                "Give the signal a known number in [constants]; [run_errors] scale says how well it is known"
+            )
+            notes.problem(entry.where, message, advice=advice)
         else:
             message = f"'{name}' in the signal is not known"
             notes.problem(entry.where, message, advice=f"Add {name} to [constants]. {near(name, known)}")

@@ -21,7 +21,9 @@ def _side(text: str, whole: str) -> dict[str, float]:
     for term in re.split(r"\s+\+\s+", text.strip()) if text.strip() else []:
         match = _TERM.fullmatch(term.strip())
         if match is None:
-            raise EquationError(f"'{term.strip()}' is no species in '{whole}'")
+            joined = re.match(r"[\d.]+(?=[^\W\d])", term.strip())
+            hint = f"; part the {joined[0]} from the species by a space" if joined else ""
+            raise EquationError(f"'{term.strip()}' is no species in '{whole}'{hint}")
         number = float(match["number"] or 1)
         if number <= 0:
             raise EquationError(f"'{term.strip()}' has no positive number before it")

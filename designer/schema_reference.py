@@ -14,7 +14,7 @@ _TABLES: tuple[tuple[str, str, type[schema.Table]], ...] = (
     (
         "`[conditions]`",
         "One key for each. A condition that occurs in an equation is a species, given as a concentration; "
-        "any other (catalyst, pressure) keeps its own unit and is used bare. `temperature` is a condition too. "
+        "any other (catalyst, pressure) keeps its own unit and is used bare. `temperature` is one too. "
         "A bare value is fixed; otherwise a table of these keys:",
         schema.ConditionTable,
     ),

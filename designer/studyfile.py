@@ -116,6 +116,7 @@ def _syntax(reason: tomllib.TOMLDecodeError, text: str) -> Problem:
     where = place.rstrip(")").removesuffix("end of document").strip()
     if not where:
         where = f"line {text.count(chr(10)) + 1}"
+    what = "a key is given twice" if what == "Cannot overwrite a value" else what
     advice = "Mend this line first; the rest of the file cannot be read before"
     return Problem(where, f"not written as TOML: {what[:1].lower()}{what[1:]}", advice=advice)
 

@@ -86,7 +86,7 @@ AU = 1
 LONGEST = 80  # characters of one quantity
 _NUMBER = r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d{1,3})?"
 _QUANTITY = re.compile(rf"\s*(?P<number>{_NUMBER})(?P<unit>.*)", re.DOTALL)
-_EXPONENT = r"-?\d(?:\.\d{1,3})?"
+_EXPONENT = r"-?\d{1,2}(?:\.\d{1,3})?"
 _UNIT_TOKEN = re.compile(
     rf"\s*(?:(?P<word>[A-Za-zµμ%]+)|(?P<one>1(?=\s*/))"
     rf"|(?P<power>\^\s*(?:{_EXPONENT}|\({_EXPONENT}\)))|(?P<mark>[*/·().]))"
@@ -240,12 +240,12 @@ def _factor(symbol: str, exponent: float) -> str:
 def unit_of(dimension: Dimension, prefer: str = "s") -> str:
     """A printable unit of this dimension, with ``prefer`` as the unit of time; "" for a plain number.
 
-    L stands for dm^3 where the exponent of length is a multiple of 3.
+    L stands for dm^3 wherever its exponent has at most three decimals.
     """
     symbols = ["mol", "L", "g", "K", "bar", "J", prefer]
     time, mole, length, gram, kelvin, bar, joule = dimension
-    exponents = [mole, round(length / 3, 6), gram, kelvin, bar, joule, time]
-    if length and exponents[1] * 2 % 1 and (length % 1 == 0):
+    exponents = [mole, round(length / 3, 3), gram, kelvin, bar, joule, time]
+    if abs(3 * exponents[1] - length) > 1e-9:
         symbols[1], exponents[1] = "dm", length
     above = [_factor(s, e) for s, e in zip(symbols, exponents, strict=True) if e > 0]
     below = [_factor(s, -e) for s, e in zip(symbols, exponents, strict=True) if e < 0]
