@@ -48,6 +48,7 @@ class Form:
     unknown: Mapping[str, Fraction] = field(default_factory=dict)
 
     def plus(self, other: Form, factor: Fraction = Fraction(1)) -> Form:
+        """self + factor * other."""
         known = tuple(a + factor * b for a, b in zip(self.known, other.known, strict=True))
         names = dict.fromkeys([*self.unknown, *other.unknown])
         zero = Fraction(0)
@@ -55,14 +56,17 @@ class Form:
         return Form(known, {name: value for name, value in sums.items() if value})
 
     def times(self, factor: Fraction) -> Form:
+        """The form of a power: every exponent times ``factor``."""
         return Form().plus(self, factor)
 
     @property
     def dimension(self) -> Dimension | None:
+        """The dimension; None while it rests on unknown ones."""
         return None if self.unknown else tuple(float(value) for value in self.known)
 
 
 def form(dimension: Dimension) -> Form:
+    """A known dimension as a form."""
     return Form(tuple(Fraction(value).limit_denominator(1000) for value in dimension))
 
 
@@ -126,6 +130,7 @@ class Deduction:
         return rest.plus(value, factor)
 
     def in_words(self, found: Form) -> str:
+        """The dimension in words, as far as it is settled."""
         dimension = self.reduced(found).dimension
         return "something undetermined" if dimension is None else units.dimension_words(dimension)
 

@@ -44,10 +44,12 @@ class Middle:
 
     @property
     def values(self) -> dict[str, float]:
+        """Condition -> its middle."""
         return plainlaw.middles(self.conditions)
 
     @property
     def temperature(self) -> float | None:
+        """Temperature there, K; None where the study has none."""
         return self.values.get("temperature")
 
     def log_rate(
@@ -61,6 +63,7 @@ class Middle:
             return np.log(plainlaw.rate(candidate.steps[0], names, concentrations, concentrations))
 
     def constants(self, candidate: Candidate) -> dict[str, object]:
+        """The candidate's constants at their medians, at this temperature."""
         return {c.name: plainlaw.at_temperature(c, self.temperature) for c in candidate.constants}
 
 

@@ -43,18 +43,22 @@ class Start:
     concentrations: Mapping[str, float]
 
     def with_constant(self, name: str, value: float) -> Start:
+        """The same start with one constant at ``value``."""
         return Start(self.steps, {**self.names, name: value}, self.concentrations)
 
     @property
     def reactant(self) -> str:
+        """First-named reactant of the first step."""
         return self.steps[0].equation.first_reactant
 
     @property
     def amount(self) -> float:
+        """Starting concentration of that reactant, mol/L."""
         return self.concentrations.get(self.reactant, 0.0)
 
     @property
     def by_extent(self) -> bool:
+        """Whether the rate depends on the extent of one reaction alone."""
         return len(self.steps) == 1 and "time" not in expressions.names(self.steps[0].rate)
 
 

@@ -35,6 +35,7 @@ class Reader:
     scene: stated.Scene
 
     def all(self, entry: Entry | None) -> list[Listed]:
+        """Every candidate that can be used; problems with the others are noted."""
         tables = list(entry.each()) if entry is not None else []
         if not tables:
             advice = "Add [[candidates]] with name, rate and belief"
@@ -79,6 +80,7 @@ class Reader:
             self.notes.problem("candidates", message, f"{total:.6g}", "1", advice)
 
     def one(self, table: Entry, place: int) -> Listed | None:
+        """One candidate; None (and problems) where it cannot be used."""
         named = table.get("name")
         name = named.value if named is not None else f"candidate {place}"
         before = len(self.notes.problems)
@@ -352,6 +354,7 @@ def species_known(notes: Notes, setting: Setting, entry: Entry, node: Node, what
 
 
 def report(notes: Notes, where: str, clashes: Sequence[Clash]) -> None:
+    """Note clashes of dimension as problems at ``where``."""
     for clash in clashes:
         advice = clash.advice or "Check the form of the expression and the units it rests on"
         notes.problem(where, f"in {clash.part}: {clash.message}", advice=advice)

@@ -30,6 +30,7 @@ def time_unit(notes: Notes) -> str:
 
 
 def limits(notes: Notes) -> Limits:
+    """Ceilings of the file, times in s."""
     table = notes.raw.root.get("limits")
     if table is None:
         advice = 'Add [limits] with at least longest_run = "3 h"'
@@ -57,6 +58,7 @@ def limits(notes: Notes) -> Limits:
 
 
 def plan(notes: Notes, bounds: Limits, readings: Sequence[Reading]) -> PlanSize:
+    """Runs and samples to fill; samples of a continuous signal follow from the longest run."""
     table = notes.raw.root.get("plan")
     if table is None:
         notes.missing(notes.raw.root, "plan", "no plan to fill", "Add [plan] with runs and samples")
@@ -85,6 +87,7 @@ def recorded(bounds: Limits, readings: Sequence[Reading]) -> int | None:
 
 
 def aim(notes: Notes, listed: Sequence[Candidate]) -> Aim:
+    """When the study has done its work; precisions name constants of the candidates."""
     table = notes.raw.root.get("aim")
     if table is None:
         return Aim()

@@ -15,6 +15,7 @@ from designer.studyfile import Entry
 
 
 def readings(notes: Notes, setting: Setting, listed: Sequence[Candidate]) -> tuple[Reading, ...]:
+    """What is read, with its errors, in internal units."""
     entry = notes.raw.root.get("readings")
     tables = [table for table in entry.each() if table.value is not None] if entry is not None else []
     if not tables:
@@ -136,6 +137,7 @@ def _errors(notes: Notes, table: Entry, dimension: Dimension) -> dict[str, Any]:
 
 
 def run_errors(notes: Notes, setting: Setting, found: Sequence[Reading]) -> RunErrors:
+    """Errors shared by all samples of a run; relative, K, s or the unit of the signal."""
     entry = notes.raw.root.get("run_errors")
     if entry is None:
         return RunErrors()

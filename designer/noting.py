@@ -34,6 +34,7 @@ def near(word: str, words: Iterable[str]) -> str:
 
 
 def expected_words(dimension: Dimension) -> str:
+    """What is expected, with an example where one is usual."""
     words = units.dimension_words(dimension)
     example = _SUCH_AS.get(dimension)
     return f"{words} such as {example}" if example else words
@@ -51,11 +52,13 @@ class Notes:
     def problem(
         self, where: str, message: str, found: str = "", expected: str = "", advice: str = ""
     ) -> None:
+        """Note a problem (see ``errors.Problem``), once."""
         problem = Problem(where, message, found, expected, advice)
         if problem not in self.problems:
             self.problems.append(problem)
 
     def warn(self, text: str) -> None:
+        """Note a warning, once."""
         if text not in self.warnings:
             self.warnings.append(text)
 

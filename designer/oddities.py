@@ -21,6 +21,7 @@ def look(
     bounds: Limits,
     unit: str,
 ) -> None:
+    """Note every oddity as a warning."""
     _bath(notes, listed, errors)
     _memory(notes, readings)
     _absent(notes, setting, listed, readings)

@@ -61,6 +61,7 @@ def split(
 
 
 def middles(conditions: tuple[Condition, ...]) -> dict[str, float]:
+    """Condition -> middle of what is on offer."""
     return {condition.name: condition.middle for condition in conditions}
 
 

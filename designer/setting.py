@@ -26,6 +26,7 @@ class Setting:
 
     @property
     def known(self) -> dict[str, float]:
+        """Study constant -> internal value."""
         return {name: quantity.value for name, quantity in self.constants.items()}
 
     @property
@@ -37,6 +38,7 @@ class Setting:
 
 
 def build(notes: Notes) -> Setting:
+    """Reactions, conditions and constants of the file; every problem goes into ``notes``."""
     root = notes.raw.root
     equations = _equations(notes, root.get("reactions"))
     overriding = _overriding(notes, root.get("candidates"))

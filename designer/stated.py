@@ -49,9 +49,11 @@ class Scene:
 
     @property
     def temperature(self) -> Condition | None:
+        """The condition ``temperature``, where the study has it."""
         return next((c for c in self.conditions if c.name == "temperature"), None)
 
     def at(self, given: dict[str, float]) -> dict[str, float]:
+        """Every condition: as given, else at the middle of what is on offer."""
         return {**plainlaw.middles(self.conditions), **given}
 
 

@@ -26,16 +26,19 @@ class Entry:
     value: Any
 
     def get(self, key: str) -> Entry | None:
+        """The entry under ``key`` of a table; None where there is none."""
         found = self.value.get(key) if isinstance(self.value, dict) else None
         return None if found is None else Entry(f"{self.where}.{key}" if self.where else key, found)
 
     def items(self) -> Iterator[tuple[str, Entry]]:
+        """(key, entry) of a table, in the order of the file."""
         for key in self.value if isinstance(self.value, dict) else ():
             entry = self.get(key)
             if entry is not None:
                 yield key, entry
 
     def each(self) -> Iterator[Entry]:
+        """Entries of a list; an item that was no use has the value None."""
         for number, value in enumerate(self.value, 1):
             yield Entry(f"{self.where}[{number}]", value)
 

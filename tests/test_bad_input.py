@@ -261,7 +261,8 @@ BAD = {
         [('signal     = "[ester]"', 'signal = "k*[ester]"')],
         [
             "readings[1].signal: 'k' is an unknown of a candidate, and a signal must mean the same "
-            "under all. Give the signal a known number in [constants]; [run_errors] scale says how well it is known"
+            "under all. Give the signal a known number in [constants]; "
+            "[run_errors] scale says how well it is known"
         ],
     ),
     "precision of nothing": (

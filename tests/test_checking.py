@@ -313,6 +313,15 @@ def test_free_order_stoichiometry_is_that_of_the_most_believed() -> None:
     assert dict(study.candidates[-1].steps[0].equation.stoichiometry)["hydroxide"] == -2
 
 
+def test_free_order_stoichiometry_in_a_tie_is_that_of_the_reactions() -> None:
+    own = 'equation = "ester + 3 hydroxide -> acid"\nrate   = "k*[ester]*[hydroxide]"'
+    stated = 'k = { value = "0.0278 L/(mol*s)", give_or_take = 3 }'
+    given = f'k      = {{ half_life = "12 min", give_or_take = 3, {AT} }}'
+    study = built(('rate   = "k*[ester]*[hydroxide]"', own), (given, stated))
+    assert dict(study.candidates[0].steps[0].equation.stoichiometry)["hydroxide"] == -3
+    assert dict(study.candidates[-1].steps[0].equation.stoichiometry)["hydroxide"] == -1
+
+
 def test_free_order_share_and_names() -> None:
     study = built(
         ("title  ", "free_order = 0.1\ntitle  "),
