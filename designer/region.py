@@ -128,7 +128,7 @@ def merged(
     value: Callable[[np.ndarray, np.ndarray], float],
     loss: float,
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Join neighbouring points (at their weighted mean) while ``value`` falls by no more than ``loss`` in all.
+    """Join neighbours (at their weighted mean) while ``value`` falls by no more than ``loss`` in all.
 
     An exchange leaves pairs of points on both sides of the true one. Nearest pairs come first; points that
     differ in an axis of levels stay apart.
