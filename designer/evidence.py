@@ -28,6 +28,7 @@ from designer.likelihood import Design, Readings, RunTerms, loss, reading_losses
 from designer.signals import Law, Signal
 
 LONGEST_STEP = 1.5  # in structural coordinates, so in prior standard deviations
+LEAST_PIVOT = 1e-6  # of H, below which it is not taken for positive
 CONVERGED = 1e-6  # decrement at which a fit stops
 STEPS = 6  # of a batch, after which those that need more are gathered
 MOST_ROUNDS = 6
@@ -155,12 +156,13 @@ def _inverse(lower: arrays.Matrix, size: int) -> Array:
 
 
 class State(NamedTuple):
-    """Where a fit stands: the best point so far with F there, the point to be tried next, damping,
-    decrement (expected fall of F still left), and whether it is over."""
+    """Where a fit stands: the best point so far with F there (Gauss-Newton's matrix where the exact one
+    is not positive), the point to be tried next, damping, decrement (expected fall of F still left),
+    and whether it is over."""
 
     best: Point
-    exact: Quadratic
-    safe: Quadratic  # Gauss-Newton
+    near: Quadratic
+    pivot: Array  # smallest of the exact Hessian
     trouble: Array
     trial: Point
     damping: Array
@@ -169,40 +171,39 @@ class State(NamedTuple):
 
 
 def _blank(law: Law, start: Point) -> State:
-    """A fit about to begin: nothing is known, so that whatever the start gives is an improvement."""
-    d, (runs, p) = len(law.structural), start.z.shape
-    zeros = Quadratic(
-        jnp.asarray(jnp.inf),
-        jnp.zeros(d),
-        jnp.zeros((runs, p)),
-        jnp.eye(d),
-        jnp.zeros((runs, d, p)),
-        jnp.broadcast_to(jnp.eye(p), (runs, p, p)),
+    """Fits about to begin (leading axis: draw): nothing is known, so whatever the start gives is better."""
+    count, runs, p = start.z.shape
+    d = len(law.structural)
+    near = Quadratic(
+        np.full(count, np.inf),
+        np.zeros((count, d)),
+        np.zeros((count, runs, p)),
+        np.tile(np.eye(d), (count, 1, 1)),
+        np.zeros((count, runs, d, p)),
+        np.tile(np.eye(p), (count, runs, 1, 1)),
     )
-    nothing = jnp.asarray(jnp.inf)
-    return State(start, zeros, zeros, jnp.asarray(1.0), start, jnp.asarray(1e-1), nothing, jnp.asarray(False))
+    one = np.ones(count)
+    return State(start, near, one, one, start, 0.1 * one, np.inf * one, np.zeros(count, bool))
 
 
 def _step(law: Law, state: State, design: Design, readings: Readings, free: Array) -> State:
-    """Look at the trial point, keep it if F falls, and propose the next: a damped Newton step, with
-    Gauss-Newton's matrix where H is not positive."""
+    """Look at the trial point, keep it if F falls, and propose the next by a damped Newton step."""
     exact, safe, trouble = quadratic(law, state.trial, design, readings, law.second_order)
-    fresh = (state.trial, exact, safe, trouble)
-    old = (state.best, state.exact, state.safe, state.trouble)
-    tolerance = 1e-9 * (1 + jnp.abs(exact.value))
-    better = (exact.value <= state.exact.value + tolerance) & (trouble == 0)
-    best, exact, safe, trouble = jax.tree.map(lambda a, b: jnp.where(better, a, b), fresh, old)
+    pivot = eliminate(exact, 0.0, free).pivot
+    near = jax.tree.map(lambda a, b: jnp.where(pivot > LEAST_PIVOT, a, b), exact, safe)
+    tolerance = 1e-9 * (1 + jnp.abs(near.value))
+    better = (near.value <= state.near.value + tolerance) & (trouble == 0)
+    fresh, old = (state.trial, near, pivot, trouble), (state.best, state.near, state.pivot, state.trouble)
+    best, near, pivot, trouble = jax.tree.map(lambda a, b: jnp.where(better, a, b), fresh, old)
     damping = jnp.where(better, jnp.maximum(state.damping * 0.1, 1e-9), state.damping * 8)
-    positive = eliminate(exact, 0.0, free).pivot > 1e-6
-    matrix = jax.tree.map(lambda a, b: jnp.where(positive, a, b), exact, safe)
-    move = eliminate(matrix, damping, free)
-    decrement = -(jnp.sum(exact.u * free * move.u) + jnp.sum(exact.z * move.z)) / 2
+    move = eliminate(near, damping, free)
+    decrement = -(jnp.sum(near.u * free * move.u) + jnp.sum(near.z * move.z)) / 2
     settled = (state.decrement < CONVERGED) & better
     largest = jnp.maximum(jnp.max(jnp.abs(move.u), initial=0.0), jnp.max(jnp.abs(move.z), initial=0.0) / 2)
     shrink = jnp.minimum(1.0, LONGEST_STEP / jnp.maximum(largest, 1e-12))
     trial = Point(best.u + shrink * move.u, best.z + shrink * move.z)
     done = settled | (damping > 1e7)
-    after = State(best, exact, safe, trouble, trial, damping, decrement, done)
+    after = State(best, near, pivot, trouble, trial, damping, decrement, done)
     return jax.tree.map(lambda a, b: jnp.where(state.done, a, b), state, after)
 
 
@@ -219,24 +220,24 @@ def _advance(
         return carry[0] + 1, step(carry[1], design, readings, free)
 
     state = jax.lax.while_loop(going, onward, (jnp.asarray(0), state))[1]
-    return state, jax.vmap(_laplace)(state, state.exact, free)
+    return state, jax.vmap(_laplace)(state, state.near, state.near, free)
 
 
-def _laplace(state: State, exact: Quadratic, free: Array) -> Fit:
-    """Log evidence from the best point; Gauss-Newton's determinant where H is not positive."""
+def _laplace(state: State, exact: Quadratic, safe: Quadratic, free: Array) -> Fit:
+    """Log evidence from the best point; the determinant of ``safe`` where ``exact`` is not positive."""
     factor = eliminate(exact, 0.0, free)
-    good = factor.pivot > 0
-    safe = eliminate(state.safe, 0.0, free)
-    log_determinant = jnp.where(good, factor.log_determinant, safe.log_determinant)
-    decrement = jnp.where(good, jnp.abs(state.decrement), jnp.inf)
+    good = factor.pivot > LEAST_PIVOT
+    instead = factor if exact is safe else eliminate(safe, 0.0, free)
+    log_determinant = jnp.where(good, factor.log_determinant, instead.log_determinant)
+    pivot = state.pivot if exact is safe else factor.pivot
     return Fit(
         state.best.u,
         state.best.z,
         -exact.value - log_determinant / 2,
         exact.value,
-        decrement,
-        factor.pivot,
-        jnp.where(good, factor.covariance, safe.covariance),
+        jnp.abs(state.decrement),
+        pivot,
+        jnp.where(good, factor.covariance, instead.covariance),
         state.trouble,
     )
 
@@ -244,7 +245,7 @@ def _laplace(state: State, exact: Quadratic, free: Array) -> Fit:
 def _exactly(law: Law, state: State, design: Design, readings: Readings, free: Array) -> Fit:
     """Laplace with the Hessian from differences of the gradient, for laws without cheap second derivatives."""
     exact = jax.vmap(partial(hessian_by_differences, law), in_axes=(0, None, 0))(state.best, design, readings)
-    return jax.vmap(_laplace)(state, exact, free)
+    return jax.vmap(_laplace)(state, exact, state.near, free)
 
 
 def hessian_by_differences(law: Law, point: Point, design: Design, readings: Readings) -> Quadratic:
@@ -300,7 +301,6 @@ class Kernel:
         self._scan = jax.jit(partial(scan, law))
         self._advance = jax.jit(partial(_advance, law))
         self._exactly = jax.jit(partial(_exactly, law))
-        self._blank = jax.vmap(partial(_blank, law))
 
     def best_nodes(self, design: Design, readings: Readings, count: int) -> np.ndarray:
         """The ``count`` best structural nodes of every data set: (draw, count, structural)."""
@@ -326,7 +326,7 @@ class Kernel:
             u = self.best_nodes(design, readings, 1)[:, 0]
             start = Point(u, np.zeros((count, len(design.times), len(self.law.errors))))
         free = np.ones_like(start.u) if free is None else np.asarray(free)
-        state, fit = self._run(design, readings, free, self._blank(start))
+        state, fit = self._run(design, readings, free, _blank(self.law, start))
         for _ in range(MOST_ROUNDS - 1):
             rest = np.flatnonzero(~state.done)
             if len(rest) == 0:

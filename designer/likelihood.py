@@ -147,30 +147,37 @@ def loss(law: Law, signal: Signal, readings: Readings, mask: Array) -> Array:
     return _slopes(law, signal, readings, mask).loss.sum((-3, -2, -1))
 
 
+class Pairs(NamedTuple):
+    """Pairs (i <= j) of coordinates, in which symmetric matrices are kept while they are summed."""
+
+    first: np.ndarray
+    second: np.ndarray
+    diagonal: np.ndarray  # (coordinate,): the pair (i, i)
+    square: np.ndarray  # (coordinate, coordinate): the pair of an entry
+
+
+def pairs(size: int) -> Pairs:
+    first, second = np.triu_indices(size)
+    square = np.zeros((size, size), int)
+    square[first, second] = square[second, first] = np.arange(len(first))
+    return Pairs(first, second, square.diagonal().copy(), square)
+
+
 def second_order(
     function: Callable[[Array], tuple[Array, ...]], x: Array
 ) -> tuple[tuple[Array, ...], tuple[Array, ...], tuple[Array, ...]]:
-    """Values, Jacobians (x, ...) and Hessians (x, x, ...) by forward-over-forward differentiation.
-
-    Each pair of coordinates is differentiated once.
-    """
-    size = x.shape[0]
-    rows = [i for i in range(size) for _ in range(i, size)]
-    columns = [j for i in range(size) for j in range(i, size)]
-    basis = jnp.eye(size)
+    """Values, Jacobians (x, ...) and second derivatives (pair, ...) by forward-over-forward
+    differentiation; each pair of coordinates (``pairs``) is differentiated once."""
+    two = pairs(x.shape[0])
+    basis = jnp.eye(x.shape[0])
 
     def along(v: Array, w: Array) -> tuple[tuple[Array, ...], tuple[Array, ...], tuple[Array, ...]]:
         first = lambda at: jax.jvp(function, (at,), (v,))  # noqa: E731
         (value, slope), (_, bend) = jax.jvp(first, (x,), (w,))
         return value, slope, bend
 
-    value, slope, bend = jax.vmap(along, out_axes=(None, 0, 0))(
-        basis[jnp.array(rows)], basis[jnp.array(columns)]
-    )
-    pair = {(i, j): k for k, (i, j) in enumerate(zip(rows, columns, strict=True))}
-    firsts = jnp.array([pair[i, i] for i in range(size)])
-    square = jnp.array([[pair[min(i, j), max(i, j)] for j in range(size)] for i in range(size)])
-    return value, tuple(s[firsts] for s in slope), tuple(b[square] for b in bend)
+    value, slope, bend = jax.vmap(along, out_axes=(None, 0, 0))(basis[two.first], basis[two.second])
+    return value, tuple(s[two.diagonal] for s in slope), bend
 
 
 def run_terms(law: Law, x: Array, run: Design, readings: Readings, exact: bool) -> RunTerms:
@@ -179,6 +186,7 @@ def run_terms(law: Law, x: Array, run: Design, readings: Readings, exact: bool) 
     run and readings are one run's rows. Without ``exact`` the Hessian returned is Gauss-Newton's.
     """
     structural = len(law.structural)
+    two = pairs(x.shape[0])
 
     def parts(at: Array) -> tuple[Array, Array, Array]:
         signal = law.read(at[:structural], at[structural:], run.conditions, run.times)
@@ -188,17 +196,16 @@ def run_terms(law: Law, x: Array, run: Design, readings: Readings, exact: bool) 
         (mean, variance, trouble), (jm, jw, _), (hm, hw, _) = second_order(parts, x)
     else:
         (mean, variance, trouble), (jm, jw, _) = _first_order(parts, x)
-        hm = hw = None
+        hm = hw = jnp.zeros(())
     s = _slopes(law, Signal(mean, variance, trouble), readings, run.mask)
     gradient = _sum(s.m * jm + s.w * jw)
-    cross = _outer(jm, jw)
-    cross = cross + jnp.swapaxes(cross, 0, 1)
-    mm, ww = _outer(jm, jm), _outer(jw, jw)
-    gauss_newton = _sum(s.mm_gn * mm + s.mw_gn * cross + s.ww_gn * ww)
+    m1, m2, w1, w2 = jm[two.first], jm[two.second], jw[two.first], jw[two.second]
+    mm, mw, ww = m1 * m2, m1 * w2 + m2 * w1, w1 * w2
+    gauss_newton = _sum(s.mm_gn * mm + s.mw_gn * mw + s.ww_gn * ww)
     hessian = gauss_newton
     if exact:
-        hessian = _sum(s.mm * mm + s.mw * cross + s.ww * ww + s.m * hm + s.w * hw)
-    return RunTerms(s.loss.sum(), gradient, hessian, gauss_newton, jnp.max(trouble))
+        hessian = _sum(s.mm * mm + s.mw * mw + s.ww * ww + s.m * hm + s.w * hw)
+    return RunTerms(s.loss.sum(), gradient, hessian[two.square], gauss_newton[two.square], jnp.max(trouble))
 
 
 def _first_order(
@@ -206,10 +213,6 @@ def _first_order(
 ) -> tuple[tuple[Array, ...], tuple[Array, ...]]:
     along = lambda v: jax.jvp(function, (x,), (v,))  # noqa: E731
     return jax.vmap(along, out_axes=(None, 0))(jnp.eye(x.shape[0]))
-
-
-def _outer(a: Array, b: Array) -> Array:
-    return a[:, None] * b[None, :]
 
 
 def _sum(terms: Array) -> Array:
