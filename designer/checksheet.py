@@ -1,0 +1,258 @@
+"""The sheet that ``check`` prints: what the program understood, in the words of the trade."""
+
+from __future__ import annotations
+
+import textwrap
+from collections.abc import Iterator, Sequence
+from math import isfinite
+
+from designer import units, wording
+from designer.findings import Budget, Checkup, HalfLife, KnownConstant, LawFound, Range, ReadAs
+from designer.records import Study
+
+SMALL = 0.005  # a share below this is shown as "<1 %"
+SAME = 1e-3  # half-lives that differ by less than this share are one
+HEAD = 14  # columns of a heading before it goes on in the next line
+
+
+def check_sheet(study: Study, found: Checkup) -> str:
+    """The whole sheet as text, lines of at most ``wording.WIDTH`` columns."""
+    parts = [
+        list(_head(study, found)),
+        list(_laws(study, found)),
+        list(_half_lives(study, found)),
+        list(_budget(study, found)),
+        list(_read_as(found.read_as, "Read from the file")),
+        list(_read_as(found.defaults, "Not in the file, so taken as")),
+        list(_list("Warnings", found.warnings)),
+        list(_list("Cautions", found.cautions)),
+    ]
+    return "\n\n".join("\n".join(line.rstrip() for line in part) for part in parts if part)
+
+
+def _head(study: Study, found: Checkup) -> Iterator[str]:
+    count, warned = len(study.listed), len(found.warnings)
+    yield from wording.wrapped(found.title or "A study without a title")
+    if found.question:
+        yield from wording.wrapped(found.question)
+    odd = f", {warned} warning{'s' * (warned != 1)} (below)" if warned else ", no warnings"
+    yield f"The file can be used: {count} candidate{'s' * (count != 1)}{odd}."
+
+
+# candidates
+
+
+def _laws(study: Study, found: Checkup) -> Iterator[str]:
+    yield "CANDIDATES"
+    for law in found.laws:
+        yield f"  {law.candidate.name} ({_belief(study, law)})"
+        yield from _steps(law)
+        rows = [_constant_row(constant, found.time_unit) for constant in law.constants]
+        if rows:
+            head = ("", "unit from the rate", "middle and 90 % range", "as stated")
+            yield from _table(head, rows)
+
+
+def _belief(study: Study, law: LawFound) -> str:
+    text = f"belief {100 * law.belief:.3g} %"
+    if study.pilots:
+        text += f", {100 * law.after:.2g} % after the pilots"
+    return f"added for 'none of these', {text}" if law.candidate.free_order else text
+
+
+def _steps(law: LawFound) -> Iterator[str]:
+    several = len(law.candidate.steps) > 1
+    for step in law.candidate.steps:
+        name = f"{step.equation.name}: " if several and step.equation.name else ""
+        own = "   (an equation of its own)" if law.candidate.overrides else ""
+        yield from wording.wrapped(f"{name}{step.equation.text}{own}", "    ", "        ")
+        numbers = ", ".join(f"{species} {number:+g}" for species, number in step.equation.stoichiometry)
+        yield from wording.wrapped(f"per mole of reaction: {numbers}", "      ", "        ")
+        yield from wording.wrapped(f"rate of reaction = {step.text}", "      ", "        ")
+
+
+def _constant_row(constant: KnownConstant, time_unit: str) -> tuple[str, ...]:
+    deduced = units.unit_of(constant.dimension, time_unit) or "plain number"
+    unit = constant.unit or units.unit_of(constant.dimension, time_unit)
+    shown = _range(constant.value, unit)
+    if constant.after is not None:
+        shown += f"; after the pilots {_range(constant.after, unit, 2)}"
+    stated = constant.stated
+    if constant.energy is not None and constant.reference_temperature is not None:
+        at = units.show(constant.reference_temperature, "degC")
+        stated += f"; at {at}, activation energy {_range(constant.energy, 'kJ/mol')}"
+    return constant.name, deduced, shown, stated
+
+
+def _range(value: Range, unit: str, digits: int = 3) -> str:
+    if value.low == value.high:
+        return f"{units.show(value.middle, unit, digits)} (exact)"
+    numbers = [f"{units.convert(x, unit):.{digits}g}" for x in (value.middle, value.low, value.high)]
+    return f"{numbers[0]} ({numbers[1]} to {numbers[2]}) {unit}".rstrip()
+
+
+def _table(head: Sequence[str], rows: Sequence[Sequence[str]]) -> Iterator[str]:
+    """Aligned columns; the last one wraps."""
+    widths = [max(len(row[i]) for row in [head, *rows]) for i in range(len(head) - 1)]
+    for row in [head, *rows]:
+        lead = "      " + "".join(f"{cell:<{width}}  " for cell, width in zip(row, widths, strict=False))
+        room = max(wording.WIDTH - len(lead), 24)
+        yield from _hung(lead, row[-1], room)
+
+
+def _hung(lead: str, text: str, room: int) -> Iterator[str]:
+    lines = textwrap.wrap(text, room, break_on_hyphens=False) or [""]
+    yield lead + lines[0]
+    yield from (" " * len(lead) + line for line in lines[1:])
+
+
+# half-lives
+
+
+def _half_lives(study: Study, found: Checkup) -> Iterator[str]:
+    yield "HALF-LIFE OF THE WHOLE LAW (middle and 90 % range of the belief)"
+    yield f"  at {_conditions(study, found.middle)}, the middle of what is on offer:"
+    first, longest = (wording.clock(t, found.time_unit) for t in (found.first_sample, found.longest_run))
+    head = ("candidate", "half-life of", "time", f"gone by {first}", f"gone by {longest}")
+    rows = [_half_life_row(law, found.time_unit) for law in found.laws]
+    yield from wording.columns(head, rows, indent="    ")
+    yield from _ends(study, found)
+    for law in found.laws:
+        if law.unsolved:
+            yield from wording.wrapped(
+                f"under '{law.candidate.name}' {law.unsolved} of {law.draws} draws could not be computed "
+                "and are left out",
+                "  ! ",
+                "    ",
+            )
+
+
+def _half_life_row(law: LawFound, unit: str) -> tuple[str, ...]:
+    gone = [_percent(share) for share in (law.gone_at_first, law.gone_at_end)]
+    return law.candidate.name, law.reactant, _time(law.half_life, unit), *gone
+
+
+def _time(found: HalfLife, unit: str) -> str:
+    far = f"never, or not within {wording.clock(found.horizon, unit)}"
+    if not isfinite(found.time.middle):
+        return far if found.reached == 0 else f"{far}, in {100 * (1 - found.reached):.2g} % of the belief"
+    if found.time.low == found.time.high:
+        return units.show(found.time.middle, _unit(found.time.middle, unit))
+    unit = _unit(found.time.middle, unit)
+    low, middle, high = (
+        f"{units.convert(t, unit):.2g}" if isfinite(t) else "never" for t in _triple(found.time)
+    )
+    return f"{middle} ({low} to {high}) {unit}"
+
+
+def _triple(value: Range) -> tuple[float, float, float]:
+    return value.low, value.middle, value.high
+
+
+def _unit(seconds: float, unit: str) -> str:
+    """The study's unit of time, or a nearer one where numbers would be awkward."""
+    if 0.1 <= units.convert(seconds, unit) < 1000:
+        return unit
+    return next((u for u in ("d", "h", "min", "s") if units.convert(seconds, u) >= 1), "s")
+
+
+def _ends(study: Study, found: Checkup) -> Iterator[str]:
+    """Half-lives at the ends of the ranges, with the conditions that make them."""
+    laws = [law for law in found.laws if law.fastest is not None and not law.candidate.free_order]
+    if laws:
+        yield "  at the ends of the ranges:"
+    for law in laws:
+        said = _shortest_and_longest(study, law, found.time_unit)
+        yield from wording.wrapped(f"{law.candidate.name}: {said}", "    ", "      ")
+
+
+def _shortest_and_longest(study: Study, law: LawFound, unit: str) -> str:
+    if law.fastest is None or law.slowest is None:
+        return ""
+    short, long = law.fastest.time.middle, law.slowest.time.middle
+    if short == long or abs(long - short) < SAME * short:
+        return f"{_time(law.fastest, unit)} at every mixture on offer"
+    parts = [f"{_time(end, unit)} at {_free(study, end)}" for end in (law.fastest, law.slowest)]
+    return "; ".join(parts)
+
+
+def _conditions(study: Study, conditions: Sequence[tuple[str, float]]) -> str:
+    return ", ".join(f"{name} {units.show(x, study.condition(name).unit)}" for name, x in conditions)
+
+
+def _free(study: Study, found: HalfLife) -> str:
+    return _conditions(study, [(n, x) for n, x in found.conditions if not study.condition(n).is_fixed])
+
+
+# errors
+
+
+def _budget(study: Study, found: Checkup) -> Iterator[str]:
+    for reading in study.readings:
+        budgets = [b for b in found.budgets if b.reading == reading.name]
+        if budgets:
+            yield f"WHERE THE ERROR OF A TYPICAL SAMPLE COMES FROM: {reading.name}"
+            yield from wording.wrapped(_said(budgets[0], found.time_unit), "  ")
+            if len(budgets) > 1:
+                yield from _budget_table(budgets, found.time_unit)
+
+
+def _said(budget: Budget, unit: str) -> str:
+    """The first candidate's budget as a sentence."""
+    parts = [f"{100 * s.share:.0f} % is {s.source}" for s in budget.shares if s.share >= SMALL]
+    deviation = units.show(budget.deviation, budget.unit, 2)
+    mean = units.show(budget.mean, budget.unit)
+    return (
+        f"Under '{budget.candidate}', {wording.clock(budget.time, unit)} into a run at the middle conditions "
+        f"({100 * budget.left:.0f} % left), a reading of {mean} has an error of {deviation} (1 SD). "
+        f"Of its variance {wording.listed(parts)}."
+    )
+
+
+def _budget_table(budgets: Sequence[Budget], unit: str) -> Iterator[str]:
+    sources = list(dict.fromkeys(share.source for budget in budgets for share in budget.shares))
+    rows = []
+    for budget in budgets:
+        shares = {share.source: share.share for share in budget.shares}
+        time, error = wording.clock(budget.time, unit), units.show(budget.deviation, budget.unit, 2)
+        rows.append((budget.candidate, time, error, *(_percent(shares.get(s)) for s in sources)))
+    heads, over = _stacked(("candidate", "at", "1 SD", *sources))
+    yield from wording.columns(heads, [*over, *rows], indent="    ")
+
+
+def _stacked(heads: Sequence[str]) -> tuple[list[str], list[list[str]]]:
+    """Headings over several lines: the first line, and the further ones as rows."""
+    parts = [textwrap.wrap(head, HEAD) for head in heads]
+    deep = max(len(part) for part in parts)
+    lines = [[part[i] if i < len(part) else "" for part in parts] for i in range(deep)]
+    return lines[0], lines[1:]
+
+
+def _percent(share: float | None) -> str:
+    if share is None:
+        return wording.NONE
+    if 1 - SMALL < share < 1:
+        return ">99 %"
+    return f"{100 * share:.0f} %" if share >= SMALL else "<1 %"
+
+
+# the rest
+
+
+def _read_as(lines: Sequence[ReadAs], title: str) -> Iterator[str]:
+    if not lines:
+        return
+    yield title.upper()
+    width = max(len(line.where) for line in lines)
+    for line in lines:
+        text = f"{line.written}: {line.meaning}" if line.written else line.meaning
+        lead = f"  {line.where:<{width}}  "
+        yield from _hung(lead, text, max(wording.WIDTH - len(lead), 24))
+
+
+def _list(title: str, lines: Sequence[str]) -> Iterator[str]:
+    if not lines:
+        return
+    yield title.upper()
+    for line in lines:
+        yield from wording.wrapped(line, "  - ", "    ")

@@ -1,0 +1,177 @@
+"""The command line: each command reads its arguments, calls one function of the library and prints."""
+
+from __future__ import annotations
+
+import json
+import os
+import sys
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Annotated, Any, NoReturn
+
+import typer
+
+from designer.errors import AliquotError, Problem, StudyFileError
+
+app = typer.Typer(
+    name="aliquot",
+    help="Plan a kinetics study: which runs and sampling times tell rate laws apart and pin down k.",
+    no_args_is_help=True,
+    add_completion=False,
+    pretty_exceptions_enable=False,
+    rich_markup_mode=None,
+    context_settings={"help_option_names": ["-h", "--help"]},
+)
+
+FAILED = 2  # exit status of every expected error
+StudyPath = Annotated[Path, typer.Argument(metavar="STUDY", help="the study's folder, or its study.toml")]
+AsJson = Annotated[bool, typer.Option("--json", help="print one JSON document and nothing else")]
+
+
+def main() -> None:
+    """Entry point of ``aliquot``."""
+    for stream in (sys.stdout, sys.stderr):
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(encoding="utf-8", errors="replace")
+    app()
+
+
+@app.callback()
+def _aliquot() -> None:
+    """Without this a single command would lose its name."""
+
+
+@contextmanager
+def told(as_json: bool) -> Iterator[None]:
+    """Turn every expected error into one message and exit status 2."""
+    try:
+        yield
+    except StudyFileError as error:
+        fail(error.problems, as_json, error.source)
+    except AliquotError as error:
+        fail([Problem("", str(error))], as_json)
+    except OSError as error:
+        what = error.strerror or str(error)
+        fail([Problem(str(error.filename or ""), what[:1].lower() + what[1:])], as_json)
+
+
+def fail(problems: Any, as_json: bool, source: str = "") -> NoReturn:
+    """Report problems (on standard error, or as the one JSON document) and exit with status 2."""
+    if as_json:
+        from designer.checkdocument import error_document
+
+        emit(error_document(problems, source))
+    else:
+        for problem in problems:
+            head = f"{source}: " if source else ""
+            typer.echo(f"aliquot: {head}{problem}", err=True)
+    raise typer.Exit(FAILED)
+
+
+def emit(document: dict[str, Any]) -> None:
+    """Print the one JSON document of a command."""
+    typer.echo(json.dumps(document, indent=2, ensure_ascii=False, allow_nan=False))
+
+
+def keep_compiled() -> None:
+    """Keep compiled kernels in the user's cache folder; without, where that cannot be written."""
+    from designer import arrays
+
+    folder = cache_folder() / "compiled"
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError:
+        return
+    if os.access(folder, os.W_OK):
+        arrays.keep_compiled(folder)
+
+
+def cache_folder() -> Path:
+    """Where this platform keeps what can be made again."""
+    if os.environ.get("XDG_CACHE_HOME"):
+        return Path(os.environ["XDG_CACHE_HOME"]) / "aliquot"
+    if sys.platform == "win32":
+        return Path(os.environ.get("LOCALAPPDATA", Path.home())) / "aliquot" / "cache"
+    if sys.platform == "darwin":
+        return Path.home() / "Library" / "Caches" / "aliquot"
+    return Path.home() / ".cache" / "aliquot"
+
+
+def progress() -> Callable[[str], None] | None:
+    """A line on the terminal that says what is being worked on; nothing where nobody watches."""
+    if not sys.stderr.isatty():
+        return None
+    return lambda what: typer.echo(f"\r\033[K{what} ...", err=True, nl=False)
+
+
+def cleared() -> None:
+    """Take the line of ``progress`` away."""
+    if sys.stderr.isatty():
+        typer.echo("\r\033[K", err=True, nl=False)
+
+
+@app.command()
+def new(
+    folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="folder to make for the study")],
+    like: Annotated[str, typer.Option(metavar="TEMPLATE", help="template to start from")] = "aliquots",
+    as_json: AsJson = False,
+) -> None:
+    """Start a study: write a commented study file to fill in."""
+    from designer import templates
+
+    with told(as_json):
+        text = templates.text(like)
+        file = folder / "study.toml"
+        folder.mkdir(parents=True, exist_ok=True)
+        try:
+            with file.open("x", encoding="utf-8") as stream:
+                stream.write(text)
+        except FileExistsError:
+            advice = "Nothing was changed; choose another folder"
+            fail([Problem(str(file), "there is a study here already", advice=advice)], as_json)
+        if as_json:
+            from designer.checkdocument import new_document
+
+            emit(new_document(file, like))
+        else:
+            typer.echo(f"Wrote {file} (template '{like}').")
+            typer.echo(f"Put in your own numbers, then: aliquot check {folder}")
+
+
+@app.command()
+def check(
+    study: StudyPath,
+    as_json: AsJson = False,
+    figure: Annotated[
+        bool, typer.Option(help="draw the predicted curves into STUDY/figures/check.png")
+    ] = True,
+) -> None:
+    """Say back what the study file means: laws, half-lives, curves, where errors come from."""
+    with told(as_json):
+        from designer import studyfile
+        from designer.loading import load_study
+
+        loaded = load_study(study)
+        keep_compiled()
+        from designer.checkup import checkup
+
+        found = checkup(loaded, progress())
+        cleared()
+        drawn = None
+        if figure:
+            from designer.figures import check_figure
+
+            drawn = studyfile.locate(study).parent / "figures" / "check.png"
+            drawn.parent.mkdir(exist_ok=True)
+            check_figure(loaded, found).savefig(drawn)
+        if as_json:
+            from designer.checkdocument import check_document
+
+            emit(check_document(loaded, found, drawn))
+        else:
+            from designer.checksheet import check_sheet
+
+            typer.echo(check_sheet(loaded, found))
+            if drawn is not None:
+                typer.echo(f"\nFigure: {drawn}")
