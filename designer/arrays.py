@@ -14,8 +14,8 @@ from typing import Any
 
 os.environ.setdefault("JAX_PLATFORMS", "cpu")
 
-import jax  # noqa: E402
-import jax.numpy as jnp  # noqa: E402
+import jax
+import jax.numpy as jnp
 
 jax.config.update("jax_enable_x64", True)
 

@@ -77,9 +77,9 @@ class Fit(NamedTuple):
     trouble: Array  # 1 where the trajectory failed
 
 
-def quadratic(law: Law, point: Point, design: Design, readings: Readings, exact: bool) -> tuple[
-    Quadratic, Quadratic, Array
-]:
+def quadratic(
+    law: Law, point: Point, design: Design, readings: Readings, exact: bool
+) -> tuple[Quadratic, Quadratic, Array]:
     """F at ``point`` with the exact and with the Gauss-Newton Hessian, and trouble. One data set."""
     structural = len(law.structural)
 
@@ -207,9 +207,7 @@ def _step(law: Law, state: State, design: Design, readings: Readings, free: Arra
     return jax.tree.map(lambda a, b: jnp.where(state.done, a, b), state, after)
 
 
-def _advance(
-    law: Law, state: State, design: Design, readings: Readings, free: Array
-) -> tuple[State, Fit]:
+def _advance(law: Law, state: State, design: Design, readings: Readings, free: Array) -> tuple[State, Fit]:
     """Up to STEPS steps of every data set (leading axis of state, readings, free); one design for all."""
     step = jax.vmap(partial(_step, law), in_axes=(0, None, 0, 0))
 
@@ -305,7 +303,9 @@ class Kernel:
     def best_nodes(self, design: Design, readings: Readings, count: int) -> np.ndarray:
         """The ``count`` best structural nodes of every data set: (draw, count, structural)."""
         total = np.shape(readings.values)[0]
-        at = [np.asarray(self._scan(design, _some(readings, rows), self.nodes)) for rows in self._lanes(total)]
+        at = [
+            np.asarray(self._scan(design, _some(readings, rows), self.nodes)) for rows in self._lanes(total)
+        ]
         order = np.argsort(np.concatenate(at)[:total], axis=1)[:, :count]
         return np.asarray(self.nodes)[order]
 

@@ -123,7 +123,9 @@ def truncated(law: Law, design: Design, readings: Readings, fit: Fit) -> np.ndar
     found = np.zeros(len(side), bool)
     rows = np.flatnonzero((side != 0).any((1, 2, 3)))
     for begin in range(0, len(rows), 64):
-        lanes = np.resize(rows[begin : begin + 64], 64) if len(rows) - begin < 64 else rows[begin : begin + 64]
+        lanes = (
+            np.resize(rows[begin : begin + 64], 64) if len(rows) - begin < 64 else rows[begin : begin + 64]
+        )
         found[lanes] = np.asarray(_truncated(law, design, side[lanes], Point(fit.u[lanes], fit.z[lanes])))
     return found
 

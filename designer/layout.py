@@ -56,7 +56,9 @@ def layout(study: Study, samples: int | None = None) -> Layout:
     count = count if sampled.any() else 0
     needed = max((len(pilot.readings) for pilot in study.pilots), default=0)
     count = max(count, needed - len(grid))
-    blank = Design(np.zeros((0, len(study.conditions))), np.zeros((0, count + len(grid))), np.zeros((0, 0, 0)))
+    blank = Design(
+        np.zeros((0, len(study.conditions))), np.zeros((0, count + len(grid))), np.zeros((0, 0, 0))
+    )
     empty = Layout(count, grid, sampled, recorded, blank, Readings(np.zeros(0), np.zeros(0)))
     carried, readings = _pilots(study, empty)
     return Layout(count, grid, sampled, recorded, carried, readings)

@@ -11,9 +11,12 @@ from math import ceil, floor, log10
 
 import numpy as np
 
+from designer import units
 from designer.allowed import CLOSE, Allowed
+from designer.records import Study
 from designer.search import Proposal
 
+ZERO_CELSIUS = units.ZERO_CELSIUS
 # (up to, step), s: what is written on a bench sheet
 STEPS = (
     (10.0, 0.5),
@@ -54,24 +57,37 @@ def round_amount(value: float, scale: float, low: float, high: float, digits: in
     return float(f"{rounded:.10g}") * scale if inside else value
 
 
-def rounded(offer: Allowed, proposal: Proposal, scales: dict[str, float]) -> Proposal:
-    """The proposal as a person would write it, still within every limit.
+def round_temperature(value: float, low: float, high: float) -> float:
+    """A temperature (K) to the whole degree Celsius, inside low..high."""
+    whole = round(value - ZERO_CELSIUS) + ZERO_CELSIUS
+    return whole if low * (1 - CLOSE) <= whole <= high * (1 + CLOSE) else value
 
-    scales: size of each condition's unit in internal units.
-    """
+
+def scales(study: Study) -> dict[str, float]:
+    """Size of each condition's unit in internal units (temperatures are written in whole degrees)."""
+    named = ((condition.name, condition.unit) for condition in study.conditions)
+    return {name: units.scale(unit)[0] for name, unit in named if name != "temperature"}
+
+
+def rounded(offer: Allowed, proposal: Proposal) -> Proposal:
+    """The proposal as a person would write it, still within every limit."""
+    sizes = scales(offer.study)
     conditions = proposal.conditions.copy()
     for lever in offer.levers:
         if lever.levels:
             continue
         column = conditions[:, lever.index]
-        scale = scales.get(lever.name, 1.0)
-        conditions[:, lever.index] = [round_amount(v, scale, lever.low, lever.high) for v in column]
-    conditions = _not_overfull(offer, conditions, scales)
+        if lever.name == "temperature":
+            conditions[:, lever.index] = [round_temperature(v, lever.low, lever.high) for v in column]
+        else:
+            scale = sizes[lever.name]
+            conditions[:, lever.index] = [round_amount(v, scale, lever.low, lever.high) for v in column]
+    conditions = _not_overfull(offer, conditions, sizes)
     times = np.array([_round_run(offer, row) for row in proposal.times])
     return Proposal(conditions, _within_booking(offer, times.reshape(proposal.times.shape)), proposal.lengths)
 
 
-def _not_overfull(offer: Allowed, conditions: np.ndarray, scales: dict[str, float]) -> np.ndarray:
+def _not_overfull(offer: Allowed, conditions: np.ndarray, sizes: dict[str, float]) -> np.ndarray:
     """Step amounts drawn from stocks down until they fit the vessel together."""
     stocks = dict(offer.study.stocks)
     drawn = [lever for lever in offer.levers if lever.name in stocks and not lever.levels]
@@ -81,7 +97,7 @@ def _not_overfull(offer: Allowed, conditions: np.ndarray, scales: dict[str, floa
                 break
             for lever in drawn:
                 less = max(row[lever.index] * 0.98, lever.low)
-                row[lever.index] = round_amount(less, scales.get(lever.name, 1.0), lever.low, less)
+                row[lever.index] = round_amount(less, sizes[lever.name], lever.low, less)
     return conditions
 
 
@@ -115,7 +131,9 @@ def _within_booking(offer: Allowed, times: np.ndarray) -> np.ndarray:
         over = times[:, -1].sum() - room
         if over <= CLOSE * booked:
             return times
-        gaps = times[:, -1] - np.maximum(times[:, -2] + offer.spacing if times.shape[1] > 1 else offer.first, 0)
+        gaps = times[:, -1] - np.maximum(
+            times[:, -2] + offer.spacing if times.shape[1] > 1 else offer.first, 0
+        )
         run = int(gaps.argmax())
         if gaps[run] <= 0:
             break

@@ -14,9 +14,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from designer import steepest, usual, virtual
+from designer.allowed import Allowed, fit_conditions, fit_times
 from designer.evidence import Point
 from designer.likelihood import Design
-from designer.allowed import Allowed, fit_conditions, fit_times
 from designer.virtual import Bench, Truth
 
 RATE_LEVER, RATE_TIME = 0.06, 0.12  # first steps of the ascent: of a lever's way, and in ln t
@@ -28,10 +28,10 @@ class Effort:
     """How hard to search. studies: virtual studies in all; the rest are counts of designs and steps."""
 
     studies: int = 256
-    looks: int = 48
-    starts: int = 3
-    short_steps: int = 14
-    long_steps: int = 30
+    looks: int = 28
+    starts: int = 2
+    short_steps: int = 10
+    long_steps: int = 24
     sweeps: int = 3
 
     @staticmethod
@@ -110,7 +110,9 @@ class Hill:
             optima[index] = Point(fit.u, fit.z)
         return Found(proposal, value, optima), design, scores, (d_evidence, d_spread)
 
-    def slope(self, proposal: Proposal, points: list[Point | None] | None) -> tuple[Found, np.ndarray, np.ndarray]:
+    def slope(
+        self, proposal: Proposal, points: list[Point | None] | None
+    ) -> tuple[Found, np.ndarray, np.ndarray]:
         """Worth and its gradient in the levers' ways (run, lever) and in ln t (run, sample)."""
         found, design, scores, weights = self._look(proposal, points)
         assert self.truths is not None

@@ -12,8 +12,8 @@ from functools import partial
 
 import numpy as np
 
-from designer.arrays import Array, jax, jnp
 from designer.allowed import Allowed, fit_conditions, fit_times
+from designer.arrays import Array, jax, jnp
 from designer.signals import Law
 from designer.virtual import Bench, stream
 
@@ -22,7 +22,9 @@ DRAWS = 64
 CURVE = 160  # points on the curve from which the time is read
 
 
-def conversion_time(bench: Bench, conditions: np.ndarray, offer: Allowed, conversion: float = CONVERSION) -> float:
+def conversion_time(
+    bench: Bench, conditions: np.ndarray, offer: Allowed, conversion: float = CONVERSION
+) -> float:
     """When the belief-weighted median of the fraction of the first-named reactant left has fallen to
     1 - ``conversion`` at these conditions, s; the longest run if it has not by then."""
     end = offer.longest
@@ -94,5 +96,3 @@ def usual_schedules(bench: Bench, offer: Allowed) -> list[tuple[str, np.ndarray,
     if len(bench.axes.grid):
         return [(name.split(",")[0], c, t) for name, c, t in found]
     return found
-
-
