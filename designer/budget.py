@@ -11,8 +11,11 @@ import numpy as np
 
 from designer.courses import Course
 from designer.findings import Budget, Share
-from designer.records import Study
+from designer.records import Reading, Study
 
+RELATIVE, ABSOLUTE = "relative error of the reading", "absolute error of the reading"
+CLOCK = "time of sampling"
+WORDS = {"rate": "scatter of the rate", "temperature": "temperature of the run"}  # coordinate -> source
 STEP = 1e-3  # of a standard deviation; central differences are then right to about 1e-6
 
 
@@ -26,15 +29,10 @@ def budget(
     mean = seen.mean[:, 0, column]
     slopes = (mean[1::2] - mean[2::2]) / (2 * STEP)
     names = [*law.errors, *(law.structural[i] for i in stocks)]
-    within = {"relative error of the reading": reading.relative * mean[0], "absolute error": reading.absolute}
-    known = sum(size**2 for size in within.values())
-    within["time of sampling"] = float(np.sqrt(max(seen.variance[0, 0, column] - known, 0.0)))
-    if reading.time_error == 0:
-        del within["time of sampling"]
-    sizes = {name: abs(float(slope)) for name, slope in zip(names, slopes, strict=True)}
-    sizes |= {name: abs(float(size)) for name, size in within.items() if size}
-    total = sum(size**2 for size in sizes.values())
-    shares = [Share(name, size, size**2 / total) for name, size in sizes.items()]
+    sizes = [(name, abs(float(slope))) for name, slope in zip(names, slopes, strict=True)]
+    sizes += _within(reading, float(mean[0]), float(seen.variance[0, 0, column]))
+    total = sum(size**2 for _, size in sizes)
+    shares = [Share(WORDS.get(n, n), size, size**2 / total, _comes_with(n)) for n, size in sizes]
     start = float(course.see(u[None], conditions[None], np.zeros((1, 1))).amount[0, 0])
     return Budget(
         law.candidate.name,
@@ -46,6 +44,21 @@ def budget(
         float(np.sqrt(total)),
         tuple(sorted(shares, key=lambda share: -share.share)),
     )
+
+
+def _within(reading: Reading, mean: float, variance: float) -> list[tuple[str, float]]:
+    """Errors that come afresh with each sample; what the first two leave of the variance is the clock's."""
+    found = [(RELATIVE, abs(reading.relative * mean)), (ABSOLUTE, reading.absolute)]
+    rest = variance - sum(size**2 for _, size in found)
+    if reading.time_error:
+        found.append((CLOCK, float(np.sqrt(max(rest, 0.0)))))
+    return [(name, size) for name, size in found if size]
+
+
+def _comes_with(name: str) -> str:
+    if name in (RELATIVE, ABSOLUTE, CLOCK):
+        return "sample"
+    return "stock" if name.startswith("stock of ") else "run"
 
 
 def _lanes(

@@ -33,19 +33,21 @@ def new_document(file: Path, template: str) -> dict[str, Any]:
 
 
 def check_document(study: Study, found: Checkup, figure: Path | None) -> dict[str, Any]:
-    """Everything the sheet of ``check`` says. Times in s, other values in the unit that stands beside
-    them; null where a time is never reached."""
+    """Everything the sheet of ``check`` says. Times in the document's own ``time_unit``, other values in the
+    unit that stands beside them; null where a time is never reached."""
+    unit = found.time_unit
     return {
         "document": "aliquot check",
         "version": VERSION,
         "title": found.title,
         "question": found.question,
         "middle": _conditions(study, found.middle),
-        "first_sample_s": found.first_sample,
-        "longest_run_s": found.longest_run,
-        "candidates": [_law(study, law, found.time_unit) for law in found.laws],
-        "curves": [_curve(study, curve) for curve in found.curves],
-        "budgets": [_budget(budget) for budget in found.budgets],
+        "time_unit": unit,
+        "first_sample": _number(found.first_sample, unit),
+        "longest_run": _number(found.longest_run, unit),
+        "candidates": [_law(study, law, unit) for law in found.laws],
+        "curves": [_curve(study, curve, unit) for curve in found.curves],
+        "budgets": [_budget(budget, unit) for budget in found.budgets],
         "read_as": [_read_as(line) for line in found.read_as],
         "defaults": [_read_as(line) for line in found.defaults],
         "warnings": list(found.warnings),
@@ -54,11 +56,16 @@ def check_document(study: Study, found: Checkup, figure: Path | None) -> dict[st
     }
 
 
+def _number(value: float, unit: str = "") -> float | None:
+    """An internal value in ``unit`` to ten digits, without the dust of conversion; None for infinity."""
+    return float(f"{units.convert(value, unit):.10g}") if isfinite(value) else None
+
+
 def _conditions(study: Study, conditions: Iterable[tuple[str, float]]) -> dict[str, Any]:
     found = {}
     for name, value in conditions:
         unit = study.condition(name).unit
-        found[name] = {"value": units.convert(value, unit), "unit": unit}
+        found[name] = {"value": _number(value, unit), "unit": unit}
     return found
 
 
@@ -66,17 +73,17 @@ def _law(study: Study, law: LawFound, time_unit: str) -> dict[str, Any]:
     return {
         "name": law.candidate.name,
         "free_order": law.candidate.free_order,
-        "belief": law.belief,
-        "belief_after_pilots": law.after,
+        "belief": _number(law.belief),
+        "belief_after_pilots": _number(law.after),
         "own_equation": law.candidate.overrides,
         "steps": [{**_equation(step.equation), "rate": step.text} for step in law.candidate.steps],
         "constants": [_constant(constant, time_unit) for constant in law.constants],
         "half_life_of": law.reactant,
-        "half_life": _half_life(study, law.half_life),
-        "half_life_shortest": None if law.fastest is None else _half_life(study, law.fastest),
-        "half_life_longest": None if law.slowest is None else _half_life(study, law.slowest),
-        "gone_at_first_sample": law.gone_at_first,
-        "gone_at_longest_run": law.gone_at_end,
+        "half_life": _half_life(study, law.half_life, time_unit),
+        "half_life_shortest": None if law.fastest is None else _half_life(study, law.fastest, time_unit),
+        "half_life_longest": None if law.slowest is None else _half_life(study, law.slowest, time_unit),
+        "gone_at_first_sample": _number(law.gone_at_first),
+        "gone_at_longest_run": _number(law.gone_at_end),
         "draws": law.draws,
         "unsolved": law.unsolved,
     }
@@ -103,50 +110,51 @@ def _constant(constant: KnownConstant, time_unit: str) -> dict[str, Any]:
         "activation_energy_kJ_per_mol": None
         if constant.energy is None
         else _range(constant.energy, "kJ/mol"),
-        "reference_temperature_K": reference,
+        "reference_temperature_K": None if reference is None else _number(reference),
     }
 
 
 def _range(value: Range, unit: str) -> dict[str, float | None]:
     ends = {"low": value.low, "middle": value.middle, "high": value.high}
-    return {name: units.convert(x, unit) if isfinite(x) else None for name, x in ends.items()}
+    return {name: _number(x, unit) for name, x in ends.items()}
 
 
-def _half_life(study: Study, found: HalfLife) -> dict[str, Any]:
+def _half_life(study: Study, found: HalfLife, time_unit: str) -> dict[str, Any]:
     return {
         "conditions": _conditions(study, found.conditions),
-        "seconds_range_90": _range(found.time, "s"),
-        "reached": found.reached,
-        "horizon_s": found.horizon,
+        "range_90": _range(found.time, time_unit),
+        "reached": _number(found.reached),
+        "horizon": _number(found.horizon, time_unit),
     }
 
 
-def _curve(study: Study, curve: Curve) -> dict[str, Any]:
+def _curve(study: Study, curve: Curve, time_unit: str) -> dict[str, Any]:
     unit = next(reading.unit for reading in study.readings if reading.name == curve.reading)
     fans = {"middle": curve.middle, "low": curve.low, "high": curve.high}
     return {
         "candidate": curve.candidate,
         "reading": curve.reading,
         "unit": unit,
-        "times_s": list(curve.times),
-        **{name: [units.convert(x, unit) for x in values] for name, values in fans.items()},
+        "times": [_number(t, time_unit) for t in curve.times],
+        **{name: [_number(x, unit) for x in values] for name, values in fans.items()},
     }
 
 
-def _budget(budget: Budget) -> dict[str, Any]:
+def _budget(budget: Budget, time_unit: str) -> dict[str, Any]:
     return {
         "candidate": budget.candidate,
         "reading": budget.reading,
         "unit": budget.unit,
-        "time_s": budget.time,
-        "left": budget.left,
-        "mean": units.convert(budget.mean, budget.unit),
-        "error_1_sd": units.convert(budget.deviation, budget.unit),
+        "time": _number(budget.time, time_unit),
+        "left": _number(budget.left),
+        "mean": _number(budget.mean, budget.unit),
+        "error_1_sd": _number(budget.deviation, budget.unit),
         "shares": [
             {
                 "source": share.source,
-                "error_1_sd": units.convert(share.deviation, budget.unit),
-                "share_of_variance": share.share,
+                "error_1_sd": _number(share.deviation, budget.unit),
+                "share_of_variance": _number(share.share),
+                "comes_with": share.comes_with,
             }
             for share in budget.shares
         ],

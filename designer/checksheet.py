@@ -12,6 +12,11 @@ from designer.records import Study
 
 SMALL = 0.005  # a share below this is shown as "<1 %"
 SAME = 1e-3  # half-lives that differ by less than this share are one
+CURES = {
+    "sample": "comes afresh with each sample and shrinks with more samples",
+    "run": "is shared by all samples of a run and shrinks only with more runs",
+    "stock": "is shared by all runs from one stock and shrinks only with another stock",
+}
 HEAD = 14  # columns of a heading before it goes on in the next line
 
 
@@ -47,7 +52,7 @@ def _laws(study: Study, found: Checkup) -> Iterator[str]:
     for law in found.laws:
         yield f"  {law.candidate.name} ({_belief(study, law)})"
         yield from _steps(law)
-        rows = [_constant_row(constant, found.time_unit) for constant in law.constants]
+        rows = [row for constant in law.constants for row in _constant_rows(constant, found.time_unit)]
         if rows:
             head = ("", "unit from the rate", "middle and 90 % range", "as stated")
             yield from _table(head, rows)
@@ -68,27 +73,39 @@ def _steps(law: LawFound) -> Iterator[str]:
         yield from wording.wrapped(f"{name}{step.equation.text}{own}", "    ", "        ")
         numbers = ", ".join(f"{species} {number:+g}" for species, number in step.equation.stoichiometry)
         yield from wording.wrapped(f"per mole of reaction: {numbers}", "      ", "        ")
-        yield from wording.wrapped(f"rate of reaction = {step.text}", "      ", "        ")
+        yield from _rate(step.text)
 
 
-def _constant_row(constant: KnownConstant, time_unit: str) -> tuple[str, ...]:
+def _rate(text: str) -> Iterator[str]:
+    """The rate as written; a long one goes on after a ``*``."""
+    room = wording.WIDTH - 6
+    lines = textwrap.wrap(f"rate of reaction = {text}".replace("*", "*\0 "), room, subsequent_indent="  ")
+    yield from ("      " + line.replace("*\0 ", "*").replace("*\0", "*") for line in lines)
+
+
+def _constant_rows(constant: KnownConstant, time_unit: str) -> Iterator[tuple[str, ...]]:
     deduced = units.unit_of(constant.dimension, time_unit) or "plain number"
     unit = constant.unit or units.unit_of(constant.dimension, time_unit)
-    shown = _range(constant.value, unit)
-    if constant.after is not None:
-        shown += f"; after the pilots {_range(constant.after, unit, 2)}"
     stated = constant.stated
     if constant.energy is not None and constant.reference_temperature is not None:
         at = units.show(constant.reference_temperature, "degC")
         stated += f"; at {at}, activation energy {_range(constant.energy, 'kJ/mol')}"
-    return constant.name, deduced, shown, stated
+    yield constant.name, deduced, _range(constant.value, unit), stated
+    if constant.after is not None:
+        yield "", "", _range(constant.after, unit, 2), "after the pilots"
 
 
 def _range(value: Range, unit: str, digits: int = 3) -> str:
     if value.low == value.high:
         return f"{units.show(value.middle, unit, digits)} (exact)"
-    numbers = [f"{units.convert(x, unit):.{digits}g}" for x in (value.middle, value.low, value.high)]
+    numbers = [_number(units.convert(x, unit), digits) for x in (value.middle, value.low, value.high)]
     return f"{numbers[0]} ({numbers[1]} to {numbers[2]}) {unit}".rstrip()
+
+
+def _number(value: float, digits: int) -> str:
+    """A number to so many significant digits, written out between 0.001 and 100 000."""
+    rounded = float(f"{value:.{digits}g}")
+    return f"{rounded:.15g}" if 1e-3 <= abs(rounded) < 1e5 else f"{value:.{digits}g}"
 
 
 def _table(head: Sequence[str], rows: Sequence[Sequence[str]]) -> Iterator[str]:
@@ -110,12 +127,13 @@ def _hung(lead: str, text: str, room: int) -> Iterator[str]:
 
 
 def _half_lives(study: Study, found: Checkup) -> Iterator[str]:
-    yield "HALF-LIFE OF THE WHOLE LAW (middle and 90 % range of the belief)"
-    yield f"  at {_conditions(study, found.middle)}, the middle of what is on offer:"
+    yield "HALF-LIFE UNDER THE WHOLE LAW (middle and 90 % range of the belief)"
+    at = f"at {_conditions(study, found.middle)}, the middle of what is on offer:"
+    yield from wording.wrapped(at, "  ", "    ")
     first, longest = (wording.clock(t, found.time_unit) for t in (found.first_sample, found.longest_run))
-    head = ("candidate", "half-life of", "time", f"gone by {first}", f"gone by {longest}")
+    heads, over = _stacked(("candidate", "half-life", f"gone by {first}", f"gone by {longest}"))
     rows = [_half_life_row(law, found.time_unit) for law in found.laws]
-    yield from wording.columns(head, rows, indent="    ")
+    yield from wording.columns(heads, [*over, *rows], indent="    ")
     yield from _ends(study, found)
     for law in found.laws:
         if law.unsolved:
@@ -129,7 +147,7 @@ def _half_lives(study: Study, found: Checkup) -> Iterator[str]:
 
 def _half_life_row(law: LawFound, unit: str) -> tuple[str, ...]:
     gone = [_percent(share) for share in (law.gone_at_first, law.gone_at_end)]
-    return law.candidate.name, law.reactant, _time(law.half_life, unit), *gone
+    return law.candidate.name, f"{law.reactant} {_time(law.half_life, unit)}", *gone
 
 
 def _time(found: HalfLife, unit: str) -> str:
@@ -140,7 +158,7 @@ def _time(found: HalfLife, unit: str) -> str:
         return units.show(found.time.middle, _unit(found.time.middle, unit))
     unit = _unit(found.time.middle, unit)
     low, middle, high = (
-        f"{units.convert(t, unit):.2g}" if isfinite(t) else "never" for t in _triple(found.time)
+        _number(units.convert(t, unit), 2) if isfinite(t) else "never" for t in _triple(found.time)
     )
     return f"{middle} ({low} to {high}) {unit}"
 
@@ -205,8 +223,14 @@ def _said(budget: Budget, unit: str) -> str:
     return (
         f"Under '{budget.candidate}', {wording.clock(budget.time, unit)} into a run at the middle conditions "
         f"({100 * budget.left:.0f} % left), a reading of {mean} has an error of {deviation} (1 SD). "
-        f"Of its variance {wording.listed(parts)}."
+        f"Of its variance {wording.listed(parts)}. {_cure(budget)}"
     )
+
+
+def _cure(budget: Budget) -> str:
+    """More samples mend one part of the error, only more runs (or another stock) the other."""
+    parts = {kind: sum(s.share for s in budget.shares if s.comes_with == kind) for kind in CURES}
+    return "; ".join(f"{_percent(share)} {CURES[kind]}" for kind, share in parts.items() if share) + "."
 
 
 def _budget_table(budgets: Sequence[Budget], unit: str) -> Iterator[str]:

@@ -14,7 +14,7 @@ from designer.cautions import cautions
 from designer.courses import LANES, POINTS, Course, log_range, spread_out
 from designer.findings import Budget, Checkup, HalfLife, KnownConstant, LawFound, Range
 from designer.outcomes import Curve
-from designer.records import Z90, Belief, Candidate, Constant, Study
+from designer.records import Z90, Belief, Candidate, Condition, Constant, Study
 
 HORIZON = 100  # longest runs within which a half-life is looked for
 MOST_CORNERS = 64
@@ -49,7 +49,7 @@ def checkup(study: Study, progress: Progress | None = None) -> Checkup:
     """
     tell = progress or (lambda name: None)
     minds = _minds(study)
-    middle = np.array([condition.middle for condition in study.conditions])
+    middle = np.array([_middle(condition) for condition in study.conditions])
     laws = []
     for mind in minds:
         tell(mind.candidate.name)
@@ -71,6 +71,11 @@ def checkup(study: Study, progress: Progress | None = None) -> Checkup:
         cautions=cautions(study, [highest]),
         warnings=study.warnings,
     )
+
+
+def _middle(condition: Condition) -> float:
+    """The middle of what is on offer; of discrete levels the one nearest to it."""
+    return min(condition.levels or (condition.middle,), key=lambda level: abs(level - condition.middle))
 
 
 def _minds(study: Study) -> list[_Mind]:

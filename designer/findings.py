@@ -77,11 +77,13 @@ class LawFound:
 @dataclass(frozen=True)
 class Share:
     """One source of error at a sample: its standard deviation (in the unit of the signal) and its share of
-    the variance."""
+    the variance. comes_with: "sample" (afresh with each), "run" (one for all samples of a run) or
+    "stock" (one for all runs made from a stock)."""
 
     source: str
     deviation: float
     share: float
+    comes_with: str
 
 
 @dataclass(frozen=True)

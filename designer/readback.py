@@ -169,7 +169,7 @@ def _limits(study: Study, raw: dict[str, Any]) -> Iterator[ReadAs]:
         value = getattr(study.limits, key, None)
         if not isinstance(written, str) or value is None:
             continue
-        shown = units.show(value, study.time_unit, 4)
+        shown = units.show(value, study.time_unit, 6)
         if shown != written.strip():
             yield ReadAs(f"limits.{key}", written, shown)
 
