@@ -36,16 +36,16 @@ def keep_compiled(folder: Path) -> None:
 def cholesky(matrix: Matrix) -> tuple[Matrix, Array]:
     """Lower Cholesky factor of a symmetric matrix and the smallest pivot.
 
-    matrix[i][j] for j <= i. A pivot that is not positive is replaced by a tiny one, so the result is
-    always finite; the smallest true pivot tells whether the matrix was positive definite.
+    matrix[i][j] for j <= i. A pivot that is not positive is replaced by 1, so the result is always
+    finite; it then means nothing, nor do later pivots, and the smallest pivot is at most 0.
     """
     size = len(matrix)
     lower: Matrix = [[jnp.zeros(())] * size for _ in range(size)]
     smallest = jnp.asarray(jnp.inf)
     for j in range(size):
         pivot = matrix[j][j] - sum(lower[j][k] ** 2 for k in range(j))
-        smallest = jnp.minimum(smallest, pivot)
-        lower[j][j] = jnp.sqrt(jnp.maximum(pivot, 1e-300))
+        smallest = jnp.where(smallest > 0, jnp.minimum(smallest, pivot), smallest)
+        lower[j][j] = jnp.sqrt(jnp.where(pivot > 0, pivot, 1.0))
         for i in range(j + 1, size):
             inner = matrix[i][j] - sum(lower[i][k] * lower[j][k] for k in range(j))
             lower[i][j] = inner / lower[j][j]

@@ -72,7 +72,7 @@ def _lowest(fit: Fit, again: np.ndarray, tries: list[Fit]) -> Fit:
 
 def not_converged(fit: Fit) -> np.ndarray:
     """Gate N."""
-    return ~(fit.decrement <= NOT_CONVERGED) | (fit.pivot <= 0) | (fit.trouble > 0)
+    return ~(fit.decrement <= NOT_CONVERGED) | ~(fit.pivot > 0) | (fit.trouble > 0)
 
 
 def assured(

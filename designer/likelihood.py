@@ -20,6 +20,9 @@ import numpy as np
 from designer.arrays import Array, jax, jnp
 from designer.signals import Law, Signal
 
+# below it the difference of x^2/2 and ln Phi loses digits, and Laplace's continued fraction has them all
+FAR_TAIL = -50.0
+
 
 class Design(NamedTuple):
     """Runs of a study as arrays: conditions (run, condition), times (run, time) in s, and mask
@@ -90,7 +93,11 @@ def _uncensored(error: Array, variance: Array) -> _Slopes:
 def _log_tail(x: Array) -> tuple[Array, Array]:
     """ln Phi(x) and the inverse Mills ratio m = phi(x)/Phi(x)."""
     tail = jax.scipy.special.log_ndtr(x)
-    return tail, jnp.exp(-x * x / 2 - log(2 * pi) / 2 - tail)
+    far = x < FAR_TAIL
+    a = jnp.where(far, -x, 1.0)
+    fraction = a + 1 / (a + 2 / (a + 3 / (a + 4 / a)))
+    mills = jnp.exp(-x * x / 2 - log(2 * pi) / 2 - tail)
+    return tail, jnp.where(far, fraction, mills)
 
 
 @_log_tail.defjvp
