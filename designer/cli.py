@@ -7,6 +7,7 @@ import os
 import sys
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from enum import Enum
 from pathlib import Path
 from typing import Annotated, Any, NoReturn
 
@@ -25,7 +26,25 @@ app = typer.Typer(
 )
 
 FAILED = 2  # exit status of every expected error
+BAR = 30  # characters of a bar of progress
+SMALL_STUDIES = 100  # virtual studies of each candidate behind a figure when the effort is small
 StudyPath = Annotated[Path, typer.Argument(metavar="STUDY", help="the study's folder, or its study.toml")]
+
+
+class HowHard(str, Enum):
+    """Settings of a search: full, or small for a first look."""
+
+    full = "full"
+    small = "small"
+
+
+class Precision(str, Enum):
+    """What counts as precision: every constant together, or the asked ones."""
+
+    D = "D"
+    c = "c"
+
+
 AsJson = Annotated[bool, typer.Option("--json", help="print one JSON document and nothing else")]
 
 
@@ -175,3 +194,72 @@ def check(
             typer.echo(check_sheet(loaded, found))
             if drawn is not None:
                 typer.echo(f"\nFigure: {drawn}")
+
+
+def bar() -> Callable[[str, int, int], None] | None:
+    """A bar on the terminal for each stage of a plan; nothing where nobody watches."""
+    if not sys.stderr.isatty():
+        return None
+
+    def show(stage: str, done: int, total: int) -> None:
+        full = BAR * done // max(total, 1)
+        drawn = f"[{'#' * full}{'.' * (BAR - full)}] {done}/{total}"
+        typer.echo(f"\r\033[K{stage:<24} {drawn}", err=True, nl=False)
+
+    show("reading the study", 0, 1)
+    return show
+
+
+@app.command()
+def plan(
+    study: StudyPath,
+    seed: Annotated[int, typer.Option(help="the same seed gives the same plan")] = 1,
+    weight_on_law: Annotated[
+        float | None,
+        typer.Option(
+            help="telling laws apart (1) against precision (0); default: the file's", metavar="0..1"
+        ),
+    ] = None,
+    precision: Annotated[
+        Precision, typer.Option(help="count as precision all constants (D) or the asked ones (c)")
+    ] = Precision.c,
+    compare: Annotated[
+        list[Path] | None,
+        typer.Option(metavar="FILE", help="plan CSV to rate beside it; may be given more than once"),
+    ] = None,
+    effort: Annotated[HowHard, typer.Option(help="how hard to search")] = HowHard.full,
+    as_json: AsJson = False,
+) -> None:
+    """Choose runs and sampling times; write the run sheet into STUDY/plans/NNN."""
+    with told(as_json):
+        from designer import planfiles, studyfile
+        from designer.loading import load_study
+
+        loaded = load_study(study)
+        others = [planfiles.read_schedule(file, loaded) for file in compare or ()]
+        show = bar()
+        keep_compiled()
+        from designer import planfigure, planning, runsheet
+        from designer.search import Effort
+
+        found = planning.plan(
+            loaded,
+            seed=seed,
+            weight_on_law=weight_on_law,
+            precision_by=precision.value,
+            compare=others,
+            effort=Effort() if effort is HowHard.full else Effort.small(),
+            studies=planning.STUDIES if effort is HowHard.full else SMALL_STUDIES,
+            progress=show,
+        )
+        cleared()
+        sheet = runsheet.text(loaded, found)
+        drawn = planfigure.png(planfigure.plan_figure(loaded, found))
+        written = planfiles.write(studyfile.locate(study).parent, loaded, found, sheet, drawn)
+        if as_json:
+            from designer.documents import plan_document
+
+            emit({**plan_document(loaded, found), "folder": str(written)})
+        else:
+            typer.echo(sheet, nl=False)
+            typer.echo(f"\nWritten to {written}: run-sheet.txt, plan.csv, plan.json, plan.png")

@@ -75,13 +75,14 @@ def _candidates(study: Study, plan: Plan) -> list[Json]:
     for candidate in study.candidates:
         stated, after = beliefs.get(candidate.name, (candidate.belief, candidate.belief))
         steps = [
-            {"step": step.equation.name, "equation": step.equation.text, "rate": step.text}
+            {"name": step.equation.name, "equation": step.equation.text, "rate": step.text}
             for step in candidate.steps
         ]
         found.append(
             {
                 "name": candidate.name,
-                "added": candidate.free_order,
+                "free_order": candidate.free_order,
+                "own_equation": candidate.overrides,
                 "steps": steps,
                 "belief": _number(stated),
                 "belief_after_pilots": _number(after),
@@ -90,11 +91,12 @@ def _candidates(study: Study, plan: Plan) -> list[Json]:
     return found
 
 
-def _conditions(study: Study, conditions: Sequence[tuple[str, float]]) -> list[Json]:
-    found = []
+def _conditions(study: Study, conditions: Sequence[tuple[str, float]]) -> Json:
+    """Condition -> value and unit."""
+    found = {}
     for name, value in conditions:
         unit = study.condition(name).unit
-        found.append({"name": name, "value": _number(units.convert(value, unit)), "unit": unit})
+        found[name] = {"value": _number(units.convert(value, unit)), "unit": unit}
     return found
 
 
@@ -137,7 +139,7 @@ def _predicted(study: Study, predicted: Predicted) -> Json:
         "candidate": predicted.candidate,
         "reading": predicted.reading,
         "mean": _number(predicted.mean / scale),
-        "error": _number(predicted.error / scale),
+        "error_1_sd": _number(predicted.error / scale),
         "censored": predicted.censored,
         "fraction_left": _number(predicted.left),
     }

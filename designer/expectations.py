@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 
 from designer import wording
-from designer.outcomes import Inseparable, Plan, Rating
+from designer.outcomes import Estimate, Inseparable, Plan, Rating
 from designer.reasons import sentences
 from designer.records import Study
 from designer.wording import WIDTH, clock, columns, wrapped
@@ -18,7 +18,7 @@ BULLET = "- "
 
 
 def expectations(study: Study, plan: Plan, letters: Mapping[str, str]) -> list[str]:
-    """Lines of the sheet from "what to expect" to the cautions. letters: of the candidates."""
+    """Lines of the sheet from what to expect to the cautions. letters: of the candidates."""
     blocks = [
         _title("WHAT TO EXPECT"),
         _overall(study, plan),
@@ -28,8 +28,10 @@ def expectations(study: Study, plan: Plan, letters: Mapping[str, str]) -> list[s
         [line for sentence in sentences(study, plan) for line in wrapped(sentence)],
         _title("WHAT LIMITS THIS PLAN"),
         _limits(plan),
-        _title("CAUTIONS"),
-        [line for text in (*plan.cautions, *plan.warnings) for line in _bullet(text)],
+        _title("WARNINGS") if plan.warnings else [],
+        [line for text in plan.warnings for line in _bullet(text)],
+        _title("CAUTIONS") if plan.cautions else [],
+        [line for text in plan.cautions for line in _bullet(text)],
     ]
     return [line for block in blocks for line in block]
 
@@ -118,22 +120,38 @@ def _row(rating: Rating, constants: list[str]) -> list[str]:
 
 
 def _limits(plan: Plan) -> list[str]:
-    told = [f"It lies at {plan.binding}." if plan.binding else "No limit of the study holds it back."]
+    told = [
+        f"It lies at {' and '.join(plan.binding.rsplit(', ', 1))}."
+        if plan.binding
+        else "No limit of the study holds it back."
+    ]
     told += [_together(pair) for pair in plan.inseparable]
     told.append(
-        "Rounding to times and amounts a person would write costs "
-        f"{wording.estimate(plan.rounding)} of its worth."
+        "Rounding to times and amounts a person would write changes its worth by "
+        f"{wording.estimate(Estimate(-plan.rounding.value, plan.rounding.error))}."
     )
-    told += [
-        f"Local {local.kind} (Fisher information at the middle of the beliefs in '{local.candidate}', a "
-        f"sample as the unit, errors of the run left out): {local.value:.4g}; no plan within these limits is "
-        f"more than {100 * local.margin:.2g} % better by this measure."
+    told += _trouble((plan.rating, *plan.alternatives))
+    return [line for text in told for line in _bullet(text)] + _local(plan)
+
+
+def _local(plan: Plan) -> list[str]:
+    """Local criteria as a table: one row for each candidate, one column for each measure."""
+    if not plan.local:
+        return []
+    kinds = list(dict.fromkeys(local.kind for local in plan.local))
+    cells = {
+        (local.candidate, local.kind): f"{local.value:.3g} ({100 * local.margin:.2g} %)"
         for local in plan.local
-    ]
-    told += [_trouble(rating) for rating in (plan.rating, *plan.alternatives) if _troubled(rating)]
-    if not any(_troubled(rating) for rating in (plan.rating, *plan.alternatives)):
-        told.append("Numerical trouble: none, in this plan or in those beside it.")
-    return [line for text in told for line in _bullet(text)]
+    }
+    names = dict.fromkeys(local.candidate for local in plan.local)
+    told = (
+        "Local Fisher information at the middle of the beliefs (a sample as the unit, beliefs and errors of "
+        "the runs left out; in brackets by how much any other plan within the limits could be better at "
+        "most, by this measure):"
+    )
+    head = ["candidate", *(" for ".join(kind.split(" ", 1)) for kind in kinds)]
+    rows = [[name, *(cells.get((name, kind), wording.NONE) for kind in kinds)] for name in names]
+    return [*_bullet(told), *columns(head, rows, indent="    ")]
 
 
 def _together(pair: Inseparable) -> str:
@@ -147,14 +165,18 @@ def _together(pair: Inseparable) -> str:
     return start + f"Vary {wording.listed(amounts, 'or')}: that would."
 
 
-def _troubled(rating: Rating) -> bool:
-    return bool(rating.doubtful or rating.repaired or rating.unsolved)
-
-
-def _trouble(rating: Rating) -> str:
+def _trouble(ratings: tuple[Rating, ...]) -> list[str]:
+    """Everything numerical that went less than smoothly, counted plan by plan."""
+    if not any(rating.doubtful or rating.repaired or rating.unsolved for rating in ratings):
+        return ["Numerical trouble: none, in this plan or in those beside it."]
     told = [
-        f"{rating.doubtful} of {rating.studies} virtual studies rest on a probability still in doubt",
-        f"{rating.repaired} evidences were computed again by quadrature",
-        *(f"{count} draws of '{name}' could not be solved" for name, count in rating.unsolved),
+        f"'{rating.name}' {rating.doubtful} of {rating.studies} ({rating.repaired})" for rating in ratings
     ]
-    return f"Numerical trouble ('{rating.name}'): {'; '.join(told)}."
+    unsolved = [
+        f"{count} of '{name}' under '{rating.name}'" for rating in ratings for name, count in rating.unsolved
+    ]
+    return [
+        "Numerical trouble, virtual studies whose probabilities are still in doubt (in brackets: evidences "
+        f"computed again by quadrature): {', '.join(told)}.",
+        f"Draws whose curve could not be computed and are left out: {', '.join(unsolved) or 'none'}.",
+    ]

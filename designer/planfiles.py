@@ -10,6 +10,7 @@ from __future__ import annotations
 import csv
 import io
 import json
+import math
 import shutil
 import tempfile
 from pathlib import Path
@@ -66,20 +67,32 @@ def _claim(home: Path) -> Path:
 
 
 def csv_text(study: Study, schedule: Schedule) -> str:
-    """The CSV of a schedule, times in the study's unit of time and conditions in their own."""
+    """The CSV of a schedule, conditions in their own units and times in the study's, or in a smaller
+    unit where that would leave endless decimals (100 s is 1.666... min)."""
     text = io.StringIO()
+    unit = _time_unit(study, schedule)
     writer = csv.writer(text, lineterminator="\n")
     conditions = study.conditions
     heads = [_head(condition.name, condition.unit) for condition in conditions]
-    writer.writerow(["run", "sample", _head("time", study.time_unit), *heads])
+    writer.writerow(["run", "sample", _head("time", unit), *heads])
     for number, run in enumerate(schedule.runs, 1):
         values = dict(run.conditions)
         shown = [_shown(values[condition.name], condition.unit) for condition in conditions]
         for sample, time in enumerate(run.times, 1):
-            writer.writerow([number, sample, _shown(time, study.time_unit), *shown])
+            writer.writerow([number, sample, _shown(time, unit), *shown])
         if run.length is not None:
-            writer.writerow([number, END, _shown(run.length, study.time_unit), *shown])
+            writer.writerow([number, END, _shown(run.length, unit), *shown])
     return text.getvalue()
+
+
+def _time_unit(study: Study, schedule: Schedule) -> str:
+    """The first of the study's unit, min and s in which six digits write every time exactly; else s."""
+    times = [time for run in schedule.runs for time in (*run.times, run.length or 0.0)]
+    for unit in (study.time_unit, "min", "s"):
+        scale = units.scale(unit)[0]
+        if all(math.isclose(float(f"{time / scale:.6g}") * scale, time, rel_tol=1e-12) for time in times):
+            return unit
+    return "s"
 
 
 def _head(name: str, unit: str) -> str:

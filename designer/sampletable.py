@@ -86,7 +86,8 @@ def _left(predicted: Predicted) -> str:
     """Per cent left, to the digits of the instrument's error and no finer than 1 %."""
     assert predicted.left is not None
     error = predicted.error * predicted.left / predicted.mean if predicted.mean else 0.0
-    return wording.to_error(100 * predicted.left, max(100 * error, 1.0))
+    shown = wording.to_error(100 * predicted.left, max(100 * error, 1.0))
+    return "<1" if shown == "0" else shown
 
 
 def _units(study: Study, run: PlannedRun) -> str:
