@@ -7,7 +7,7 @@ import os
 import sys
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
-from enum import Enum
+from enum import StrEnum
 from pathlib import Path
 from typing import Annotated, Any, NoReturn
 
@@ -31,14 +31,14 @@ SMALL_STUDIES = 100  # virtual studies of each candidate behind a figure when th
 StudyPath = Annotated[Path, typer.Argument(metavar="STUDY", help="the study's folder, or its study.toml")]
 
 
-class HowHard(str, Enum):
+class HowHard(StrEnum):
     """Settings of a search: full, or small for a first look."""
 
     full = "full"
     small = "small"
 
 
-class Precision(str, Enum):
+class Precision(StrEnum):
     """What counts as precision: every constant together, or the asked ones."""
 
     D = "D"
