@@ -55,13 +55,15 @@ class Quadratic(NamedTuple):
 
 
 class Factor(NamedTuple):
-    """Result of the elimination: Newton step, ln det H, smallest pivot, S^-1 (structural, structural)."""
+    """Result of the elimination: Newton step, ln det H, smallest pivot, S^-1 (structural,
+    structural), ln det S."""
 
     u: Array
     z: Array
     log_determinant: Array
     pivot: Array
     covariance: Array
+    structural: Array
 
 
 class Fit(NamedTuple):
@@ -133,7 +135,8 @@ def eliminate(q: Quadratic, damping: Array | float = 0.0, free: Array | None = N
     step_u = [-x for x in arrays.solve(schur, right)]
     rest = [half_g[i] + sum(half[k][i] * step_u[k] for k in range(d)) for i in range(p)]
     step_z = [-x for x in arrays.backward(lower, rest)]
-    log_determinant = arrays.log_determinant(schur) + (arrays.log_determinant(lower).sum() if p else 0.0)
+    structural = arrays.log_determinant(schur)
+    log_determinant = structural + (arrays.log_determinant(lower).sum() if p else 0.0)
     pivot = jnp.minimum(jnp.min(pivot_z), pivot_u)
     return Factor(
         jnp.stack(step_u) if d else q.u,
@@ -141,6 +144,7 @@ def eliminate(q: Quadratic, damping: Array | float = 0.0, free: Array | None = N
         log_determinant,
         pivot,
         _inverse(schur, d),
+        structural,
     )
 
 
@@ -241,7 +245,7 @@ def _laplace(state: State, exact: Quadratic, safe: Quadratic, free: Array) -> Fi
 
 
 def _exactly(law: Law, state: State, design: Design, readings: Readings, free: Array) -> Fit:
-    """Laplace with the Hessian from differences of the gradient, for laws without cheap second derivatives."""
+    """Laplace with the Hessian from differences of the gradient (laws without cheap second derivatives)."""
     exact = jax.vmap(partial(hessian_by_differences, law), in_axes=(0, None, 0))(state.best, design, readings)
     return jax.vmap(_laplace)(state, exact, state.near, free)
 

@@ -25,17 +25,19 @@ SAME = 0.1  # nats left after the rival's best refit, below which two candidates
 APART = 2.0  # nats at which a freed condition is said to separate them
 FACTOR, KELVIN = 2.0, 10.0  # by which a fixed condition is freed
 HARD = 10.0  # separation (in squared SD) that makes a pair easy
-TELLING = 1.0  # SD a sample must contribute to be said to separate
+TELLING = 1.5  # SD a sample must contribute to be said to separate
 
 
 @dataclass(frozen=True)
 class Contrast:
     """means (truth, rival, run, time, signal): the rival's best refit to the truth's noiseless readings,
-    the truth's own on the diagonal; variance likewise; left (truth, rival): nats left after the refit."""
+    the truth's own on the diagonal; variance likewise; left (truth, rival): nats left after the refit;
+    seen: the means held at the limits of what can be read."""
 
     means: np.ndarray
     variances: np.ndarray
     left: np.ndarray
+    seen: np.ndarray
 
 
 def _signals(law: Law, design: Design, point: Point) -> Signal:
@@ -73,7 +75,9 @@ def contrast(bench: Bench, design: Design, truth: int, u: np.ndarray) -> Contras
         means.append(np.asarray(signal.mean))
         variances.append(np.asarray(signal.variance))
         left.append(np.maximum(fit.loss - (fit.u**2).sum(1) / 2 - least, 0.0))
-    return Contrast(np.stack(means, 1), np.stack(variances, 1), np.stack(left, 1))
+    stacked = np.stack(means, 1)
+    seen = np.clip(stacked, *limits(law))
+    return Contrast(stacked, np.stack(variances, 1), np.stack(left, 1), seen)
 
 
 def inseparable(bench: Bench, design: Design, seed: int) -> tuple[Inseparable, ...]:
@@ -153,7 +157,7 @@ def purposes(bench: Bench, design: Design) -> list[list[Purpose]]:
     for truth, trial in enumerate(trials):
         for rival in range(count):
             if rival != truth:
-                difference = trial.means[0, rival] - trial.means[0, truth]
+                difference = trial.seen[0, rival] - trial.seen[0, truth]
                 gap[truth, rival] = mask * difference**2 / trial.variances[0, truth]
     whole = gap.sum((2, 3, 4))
     # a share of what separates the pair, pairs that are hard to tell apart counting most

@@ -20,11 +20,12 @@ import numpy as np
 
 from designer import beliefs
 from designer.arrays import Array, jax, jnp
-from designer.evidence import Point, Quadratic, eliminate, quadratic, total_loss
+from designer.evidence import Factor, Point, Quadratic, eliminate, quadratic, total_loss
 from designer.likelihood import Design, Readings
 from designer.signals import Law
 from designer.virtual import Bench, Scores, Truth, probabilities, readings_of, simulate
 
+ALL = "all constants"  # asked for by measure D
 NEGLIGIBLE = 1e-12  # weights below this are not differentiated
 LANES = 128
 
@@ -47,6 +48,9 @@ def evidence_and_spread(
     log_evidence = -there.value - factor.log_determinant / 2
     variances = []
     for name in asked:
+        if name == ALL:
+            variances.append(_generalised(law, point, factor))
+            continue
         if name not in law.structural:
             variances.append(jnp.zeros(()))
             continue
@@ -54,6 +58,19 @@ def evidence_and_spread(
         slope = beliefs.log_slope(law.candidate.constant(name).belief, point.u[place])
         variances.append(jnp.log(slope**2 * factor.covariance[place, place]))
     return jnp.stack([log_evidence, *variances]), there
+
+
+def _generalised(law: Law, point: Point, factor: Factor) -> Array:
+    """ln of the generalised variance of the logarithms of all constants, per constant (measure D)."""
+    if not law.structural:
+        return jnp.zeros(())
+    names = [constant.name for constant in law.candidate.constants]
+    slopes = [
+        jnp.log(jnp.abs(beliefs.log_slope(law.candidate.constant(name).belief, point.u[place])))
+        for place, name in enumerate(law.structural)
+        if name in names
+    ]
+    return (2 * sum(slopes, jnp.zeros(())) - factor.structural) / len(law.structural)
 
 
 @partial(jax.jit, static_argnums=(0, 1))
@@ -107,7 +124,7 @@ def gradient(
     log evidence (study, listed) and in ln variance of asked constants (study, asked) are ``weights``."""
     d_evidence, d_spread = weights  # (study, listed), (study, asked)
     readings = readings_of(bench, design, truths)
-    asked = tuple(name for name, _ in bench.asked)
+    asked = (ALL,) if bench.precision_by == "D" else tuple(name for name, _ in bench.asked)
     conditions, times = np.zeros_like(design.conditions), np.zeros_like(design.times)
     d_values = np.zeros_like(readings.values)
     for row, index in enumerate(bench.listed):
@@ -184,8 +201,12 @@ def _precision(bench: Bench, scores: Scores, share: np.ndarray) -> tuple[np.ndar
     """Weighted loss of precision of each study and its derivative in ln variance (study, asked)."""
     if not bench.asked:
         return np.zeros(len(share)), np.zeros((len(share), 0))
-    has = np.isfinite(scores.half_width)
+    wanted = np.array([width for _, width in bench.asked])
+    widths = scores.half_width
+    if bench.precision_by == "D":
+        widths, wanted = scores.overall_width, wanted.mean(keepdims=True)
+    has = np.isfinite(widths)
     total = np.maximum((share[:, None] * has).sum(0), 1e-300)  # laws without the constant do not count
-    ratio = np.where(has, scores.half_width / np.array([width for _, width in bench.asked]), 0.0) ** 2
-    part = share[:, None] * has / total / len(bench.asked)
+    ratio = np.where(has, widths / wanted, 0.0) ** 2
+    part = share[:, None] * has / total / len(wanted)
     return (part * np.log1p(ratio) / 2).sum(1), part * ratio / (1 + ratio) / 2

@@ -20,7 +20,7 @@ from designer.arrays import Array, jax, jnp
 from designer.evidence import Fit, Kernel, Point
 from designer.layout import Layout, layout
 from designer.likelihood import Design, Readings, limits
-from designer.records import Candidate, Study
+from designer.records import Z95, Candidate, Study
 from designer.signals import Law
 
 PRIOR_DRAWS = 4000  # draws of the belief from which those that agree with a pilot are taken
@@ -155,13 +155,16 @@ class Scores(NamedTuple):
     truth: index among the listed; log_evidence (study, candidate), -inf for the free-order alternative,
     which is not fitted here (``free_order_evidence``); half_width (study, asked) of the 95 % range of
     each asked constant under the true law (nan where that law has none); spread: SD of ln k under the
-    true law (study, asked); doubtful: a value that counts is still flagged; fits of each candidate.
+    true law (study, asked); overall_width: the same half-width from the generalised variance of all
+    constants, per constant (study, 1), which measure D asks for; doubtful: a value that counts is
+    still flagged; fits of each candidate.
     """
 
     truth: np.ndarray
     log_evidence: np.ndarray
     half_width: np.ndarray
     spread: np.ndarray
+    overall_width: np.ndarray
     doubtful: np.ndarray
     repaired: np.ndarray
     unsolved: np.ndarray
@@ -192,8 +195,10 @@ def conclude(
         values, doubtful, repaired = _assure(bench, design, readings, fits, values)
     unsolved = np.array([(fits[i].trouble > 0).sum() if i in fits else 0 for i in range(len(bench.laws))])
     spread = _spreads(bench, truth, fits)
-    half_width = 1.959963984540054 * spread
-    return Scores(truth, values, half_width, spread, doubtful, repaired, unsolved, tuple(fits.values()))
+    overall = Z95 * _overall_spread(bench, truth, fits)
+    return Scores(
+        truth, values, Z95 * spread, spread, overall, doubtful, repaired, unsolved, tuple(fits.values())
+    )
 
 
 def free_order_evidence(bench: Bench, design: Design, truths: list[Truth], most: int) -> np.ndarray | None:
@@ -247,6 +252,23 @@ def _spreads(bench: Bench, truth: np.ndarray, fits: dict[int, Fit]) -> np.ndarra
             slope = slopes(law, name, fit.u[mine])
             if slope is not None:
                 spread[mine, column] = np.sqrt(np.einsum("ni,nij,nj->n", slope, fit.covariance[mine], slope))
+    return spread
+
+
+def _overall_spread(bench: Bench, truth: np.ndarray, fits: dict[int, Fit]) -> np.ndarray:
+    """Geometric mean SD of the ln-constants of the true law, by their generalised variance: (study, 1)."""
+    spread = np.full((len(truth), 1), np.nan)
+    if bench.precision_by != "D":
+        return spread
+    for row, index in enumerate(bench.listed):
+        mine = truth == row
+        law, fit = bench.laws[index], fits[index]
+        if not law.structural:
+            continue
+        size = len(law.structural)
+        each = [slopes(law, c.name, fit.u[mine]) for c in law.candidate.constants if c.name in law.structural]
+        logs = sum(np.log(np.abs(slope).sum(1)) for slope in each if slope is not None)
+        spread[mine, 0] = np.exp((logs + np.linalg.slogdet(fit.covariance[mine])[1] / 2) / size)
     return spread
 
 
