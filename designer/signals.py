@@ -151,12 +151,11 @@ def _constants(
 
     def one(constant: Constant, u: Array, temperature: Array) -> Array:
         at_reference = beliefs.value(constant.belief, coordinate(u, constant.name))
-        if constant.activation_energy is None:
+        stated, reference = constant.activation_energy, constant.reference_temperature
+        if stated is None or reference is None:  # a study states both or neither
             return at_reference
-        energy = beliefs.value(
-            constant.activation_energy, coordinate(u, f"activation energy of {constant.name}")
-        )
-        inverse = 1 / temperature - 1 / constant.reference_temperature
+        energy = beliefs.value(stated, coordinate(u, f"activation energy of {constant.name}"))
+        inverse = 1 / temperature - 1 / reference
         return at_reference * jnp.exp(-energy / GAS_CONSTANT * inverse)
 
     def values(u: Array, temperature: Array) -> dict[str, Array]:
