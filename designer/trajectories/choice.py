@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from designer import expressions
+from designer.arrays import Array
 from designer.errors import CallError
-from designer.expressions import Binary, Negative
-from designer.records import Belief, Candidate, Step
-from designer.trajectories import quadratic
-from designer.trajectories.path import Path
+from designer.expressions import Number
+from designer.records import Candidate, Step
+from designer.trajectories import clock, extent, implicit, linear, quadratic, structure
+from designer.trajectories.path import Curve, Path
 from designer.trajectories.polynomial import NotPolynomialError
 
 
@@ -17,45 +18,61 @@ def choose(candidate: Candidate, scope: frozenset[str]) -> Path:
     scope: bare names available besides the candidate's constants (conditions that are no species, study
     constants). Raises CallError where a rate names something else.
     """
+    _check_names(candidate, scope)
+    single = structure.single(candidate)
+    if single is not None:
+        found = _single(candidate, single)
+        if found is not None:
+            return found
+    network = linear.recognise(candidate)
+    if network is not None:
+        return linear.path(candidate, network)
+    return implicit.path(candidate, fallback=_integrator(candidate))
+
+
+def _integrator(candidate: Candidate) -> Path:
+    """The stiff integrator, imported when it is first used: its libraries are slow to load."""
+
+    def solve(values: dict[str, Array], start: dict[str, Array], factor: Array, times: Array) -> Curve:
+        from designer.trajectories import integrator
+
+        return integrator.path(candidate).solve(values, start, factor, times)
+
+    return Path("integrator", False, solve)
+
+
+def _check_names(candidate: Candidate, scope: frozenset[str]) -> None:
     known = scope | {constant.name for constant in candidate.constants} | {"time", "temperature"}
     for step in candidate.steps:
         unknown = [name for name in expressions.names(step.rate) if name not in known]
         if unknown:
             raise CallError(f"the rate of '{candidate.name}' names {', '.join(unknown)}, given nowhere")
-    if _is_quadratic(candidate):
-        return quadratic.path(candidate, _may_turn(candidate))
-    raise CallError(f"no path solves '{candidate.name}' yet")
 
 
-def _is_quadratic(candidate: Candidate) -> bool:
-    if len(candidate.steps) != 1 or "time" in expressions.names(candidate.steps[0].rate):
-        return False
-    (step,) = candidate.steps
+def _single(candidate: Candidate, single: Step) -> Path | None:
+    """A path for one reaction, or None where time and concentrations do not separate."""
+    parts = structure.split_time(single.rate)
+    if parts is None:
+        return None
+    in_time, rest = parts
+    still = Step(single.equation, rest, single.text)
+    hands = clock.plain if isinstance(in_time, Number) else clock.transformed(in_time)
+    turning = structure.may_turn(candidate, rest)
+    if is_quadratic(candidate, still):
+        return quadratic.path(candidate, still, turning, hands)
+    signs = {number < 0 for _, number in single.equation.stoichiometry if number}
+    if signs != {True, False} if turning else True not in signs:
+        return None  # nothing is used up: the extent has no end
+    finer = extent.path(candidate, still, turning, hands, extent.fine)
+    return extent.path(candidate, still, turning, hands, fallback=finer)
+
+
+def is_quadratic(candidate: Candidate, step: Step) -> bool:
+    """Whether the rate is a polynomial of degree <= 2 in the extent, whatever the numbers."""
+    named = (*expressions.species(step.rate), *expressions.species(step.rate, initial=True))
+    start = dict.fromkeys((*candidate.species, *named), 1.0)
     try:
-        quadratic.polynomial(step, dict.fromkeys(expressions.names(step.rate), 1.0), _ones(candidate, step))
+        quadratic.polynomial(step, dict.fromkeys(expressions.names(step.rate), 1.0), start)
     except NotPolynomialError:
         return False
     return True
-
-
-def _ones(candidate: Candidate, step: Step) -> dict[str, float]:
-    named = (*expressions.species(step.rate), *expressions.species(step.rate, initial=True))
-    return dict.fromkeys((*candidate.species, *named), 1.0)
-
-
-def _may_turn(candidate: Candidate) -> bool:
-    """Whether the rate can be negative, judged by its signs and those its constants can have."""
-    signs = any(
-        isinstance(node, Negative) or (isinstance(node, Binary) and node.operator == "-")
-        for step in candidate.steps
-        for node in expressions.walk(step.rate)
-    )
-    return signs or any(_may_be_negative(constant.belief) for constant in candidate.constants)
-
-
-def _may_be_negative(belief: Belief) -> bool:
-    return (
-        belief.family == "normal"
-        or (belief.family == "exact" and belief.centre < 0)
-        or (belief.family == "uniform" and belief.low < 0)
-    )

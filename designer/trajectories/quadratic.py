@@ -20,13 +20,10 @@ from collections.abc import Mapping
 from designer import expressions
 from designer.arrays import Array, jnp
 from designer.records import Candidate, Step
-from designer.trajectories.path import Curve, Path, concentrations
-from designer.trajectories.polynomial import POLYNOMIAL_FUNCTIONS, Polynomial, lift, power
+from designer.trajectories.clock import Clock
+from designer.trajectories.path import Curve, Path, along, filled, rates_along
+from designer.trajectories.polynomial import POLYNOMIAL_FUNCTIONS, Polynomial, growth, lift, power
 
-FEW = (
-    3e-3  # below it the series of (exp(s) - 1)/s, right to 4e-16 with five terms; second derivatives to 1e-11
-)
-MANY = 100.0  # exp(-MANY) is nothing beside any seed, and exp(MANY)^3 is still a number
 FLAT = 0.01  # |D t / 2|^2 below which tan and tanh go by series
 
 
@@ -40,15 +37,6 @@ def polynomial(step: Step, values: Mapping[str, Array], start: Mapping[str, Arra
     }
     names = {name: lift(value) for name, value in values.items()}
     return lift(expressions.evaluate(step.rate, names, now, given, POLYNOMIAL_FUNCTIONS, power))
-
-
-def growth(slope: Array, time: Array) -> Array:
-    """(exp(slope t) - 1) / slope, smooth through slope = 0; the exponent is cut at MANY."""
-    exponent = jnp.minimum(slope * time, MANY)
-    few = jnp.abs(exponent) < FEW
-    s = jnp.where(few, exponent, 0.0)
-    series = 1 + s * (1 / 2 + s * (1 / 6 + s * (1 / 24 + s / 120)))
-    return jnp.where(few, time * series, jnp.expm1(exponent) / jnp.where(few, 1.0, slope))
 
 
 def extent(law: Polynomial, time: Array) -> Array:
@@ -109,11 +97,11 @@ def _tanh_series(square: Array) -> Array:
     return value
 
 
-def used_up(step: Step, start: Mapping[str, Array], reversible: bool, free: Array) -> tuple[Array, Array]:
+def used_up(step: Step, start: Mapping[str, Array], turning: bool, free: Array) -> tuple[Array, Array]:
     """The extent, held where a species is used up, and where that was (bool, (times,))."""
     stopped = jnp.zeros(jnp.shape(free), bool)
     for name, number in step.equation.stoichiometry:
-        if number == 0 or (number > 0 and not reversible):
+        if number == 0 or (number > 0 and not turning):
             continue
         limit = start[name] / -number
         beyond = free > limit if number < 0 else free < limit  # at equality the law itself still holds
@@ -121,22 +109,20 @@ def used_up(step: Step, start: Mapping[str, Array], reversible: bool, free: Arra
     return free, stopped
 
 
-def path(candidate: Candidate, reversible: bool) -> Path:
-    """The closed form for a candidate of one step without ``time`` in its rate.
+def path(candidate: Candidate, single: Step, turning: bool, clock: Clock) -> Path:
+    """The closed form for ``single``, the one reaction that the candidate's steps amount to.
 
-    reversible: the rate may turn negative, so that products too may be used up.
+    single: its rate without a factor of time, which ``clock`` holds. turning: the rate may turn
+    negative, so that products too may be used up.
     """
-    (step,) = candidate.steps
 
     def solve(values: dict[str, Array], start: dict[str, Array], factor: Array, times: Array) -> Curve:
-        law = polynomial(step, values, start)
-        free = extent(law, factor * times) + 0.0 * times
-        reached, stopped = used_up(step, start, reversible, free)
-        now = concentrations(step, candidate, start, reached)
-        slope: Array = 0.0
-        for coefficient in reversed(law.coefficients):
-            slope = coefficient + slope * reached
-        rates = jnp.where(stopped, 0.0, factor * slope)
-        return Curve(now, (rates,), jnp.where(jnp.all(jnp.isfinite(reached)), 0.0, 1.0))
+        start = filled(candidate, start)
+        tau, odd = clock(values, start, times)
+        free = extent(polynomial(single, values, start), factor * tau) + 0.0 * times
+        reached, stopped = used_up(single, start, turning, free)
+        now = along(single, start, reached)
+        rates = rates_along(candidate, values, now, start, factor, times, stopped)
+        return Curve(now, rates, jnp.where(jnp.all(jnp.isfinite(reached)), odd, 1.0))
 
     return Path("quadratic", True, solve)
