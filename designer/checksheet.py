@@ -131,8 +131,10 @@ def _half_lives(study: Study, found: Checkup) -> Iterator[str]:
     at = f"at {_conditions(study, found.middle)}, the middle of what is on offer:"
     yield from wording.wrapped(at, "  ", "    ")
     first, longest = (wording.clock(t, found.time_unit) for t in (found.first_sample, found.longest_run))
-    heads, over = _stacked(("candidate", "half-life", f"gone by {first}", f"gone by {longest}"))
-    rows = [_half_life_row(law, found.time_unit) for law in found.laws]
+    reactants = {law.reactant for law in found.laws}
+    of = f"half-life of {reactants.pop()}" if len(reactants) == 1 else ""
+    heads, over = _stacked(("candidate", of or "half-life", f"gone by {first}", f"gone by {longest}"))
+    rows = [_half_life_row(law, found.time_unit, not of) for law in found.laws]
     yield from wording.columns(heads, [*over, *rows], indent="    ")
     yield from _ends(study, found)
     for law in found.laws:
@@ -145,9 +147,10 @@ def _half_lives(study: Study, found: Checkup) -> Iterator[str]:
             )
 
 
-def _half_life_row(law: LawFound, unit: str) -> tuple[str, ...]:
+def _half_life_row(law: LawFound, unit: str, named: bool) -> tuple[str, ...]:
     gone = [_percent(share) for share in (law.gone_at_first, law.gone_at_end)]
-    return law.candidate.name, f"{law.reactant} {_time(law.half_life, unit)}", *gone
+    time = _time(law.half_life, unit)
+    return law.candidate.name, f"{law.reactant} {time}" if named else time, *gone
 
 
 def _time(found: HalfLife, unit: str) -> str:

@@ -31,10 +31,10 @@ class _Mind:
     def __init__(self, study: Study, law: signals.Law, standing: float, drawn: np.ndarray | None) -> None:
         self.study, self.law, self.standing, self.drawn = study, law, standing, drawn
         self.course = Course(law)
-        self.u = spread_out(len(law.structural)) if drawn is None else drawn
         known = {c.name for c in law.candidate.constants}
         own = np.array([name.removeprefix("activation energy of ") in known for name in law.structural], bool)
-        self.u = np.where(own, self.u, 0.0)
+        self.u = np.zeros((LANES, len(own)))
+        self.u[:, own] = spread_out(int(own.sum())) if drawn is None else drawn[:, own]
         self.middle = np.zeros(len(own)) if drawn is None else self.u.mean(0)
 
     @property
@@ -191,12 +191,12 @@ def _curves(mind: _Mind, middle: np.ndarray, end: float) -> list[Curve]:
 
 
 def _budgets(mind: _Mind, middle: np.ndarray) -> list[Budget]:
-    """Budgets at around half conversion (half of what the longest run converts, where that is less)."""
+    """Budgets at half conversion, or half way to what the longest run converts where that is less."""
     if mind.candidate.free_order:
         return []
     limits = mind.study.limits
     _, gone = _gone(mind, middle)
-    left = max(0.5, 1 - gone / 2)
+    left = 0.5 if gone >= 0.5 else 1 - gone / 2
     (time,), _ = mind.course.fall(mind.middle[None], middle[None], limits.longest_run * 1.001, left)
     time = float(np.clip(time, limits.first_sample, limits.longest_run))
     return [

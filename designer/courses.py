@@ -15,7 +15,7 @@ import numpy as np
 from designer.arrays import Array, jax
 from designer.signals import Law
 
-LANES = 512
+LANES = 512  # a power of 2, as the net of ``spread_out`` asks
 POINTS = 48  # times of one call
 DECADES = 8  # below the horizon, where the search for a half-life begins
 ZOOMS = 3
@@ -102,18 +102,17 @@ def _stretched(values: np.ndarray, lanes: int, whole: int) -> np.ndarray:
     return np.concatenate([full, np.broadcast_to(full[-1:], (whole - lanes, *values.shape[1:]))])
 
 
-def spread_out(size: int, count: int = LANES) -> np.ndarray:
-    """``count`` points (count, size) that stand for N(0, I) evenly: quantiles in one dimension, Roberts'
-    generalised golden-ratio sequence beyond."""
+def spread_out(size: int) -> np.ndarray:
+    """``LANES`` points (LANES, size) that stand for N(0, I) evenly: a Sobol net, so each coordinate takes
+    every one of its evenly spaced quantiles once."""
     from scipy.special import ndtri
 
-    if size == 1:
-        return ndtri((np.arange(count)[:, None] + 0.5) / count)
-    golden = 2.0
-    for _ in range(60):  # the root of x^(size + 1) = x + 1
-        golden = (1 + golden) ** (1 / (size + 1))
-    steps = golden ** -np.arange(1, size + 1)
-    return ndtri((0.5 + np.arange(count)[:, None] * steps) % 1.0)
+    places = np.arange(LANES)[:, None] / LANES
+    if size > 1:
+        from scipy.stats import qmc
+
+        places = qmc.Sobol(size, scramble=False).random(LANES)
+    return ndtri(places[:, :size] + 0.5 / LANES)
 
 
 def log_range(values: np.ndarray) -> tuple[float, float, float]:

@@ -190,7 +190,7 @@ def defaults(study: Study) -> tuple[ReadAs, ...]:
 
 
 def _defaults(study: Study, raw: dict[str, Any]) -> Iterator[tuple[str, str]]:
-    if not any("belief" in table for table in raw.get("candidates", [])):
+    if len(study.listed) > 1 and not any("belief" in table for table in raw.get("candidates", [])):
         yield "belief", f"equal for all {len(study.listed)} candidates"
     free = next((c for c in study.candidates if c.free_order), None)
     if free is not None and "free_order" not in raw:
