@@ -81,7 +81,7 @@ def _class(rise: float) -> str:
 
 def _beyond(condition: Condition, value: float, highest: float) -> str:
     """Not yet run here, and how to get there where it is far."""
-    shown, before = units.show(value, condition.unit), units.show(highest, condition.unit)
+    shown, before = (units.show(x, condition.unit, 4) for x in (value, highest))
     text = f"{condition.name} {shown}: not yet run here, the highest so far is {before}"
     if condition.dimension == units.TEMPERATURE:
         far, step = value - highest > STEP_KELVIN * CLOSE, f"{STEP_KELVIN:g} K"
@@ -133,7 +133,7 @@ def _amounts(study: Study, run: Mapping[str, float]) -> str:
         if number < 0
     }
     shown = [
-        f"{c.name} {units.show(run[c.name], c.unit)}"
+        f"{c.name} {units.show(run[c.name], c.unit, 4)}"
         for c in study.conditions
         if c.name in used and c.name in run
     ]

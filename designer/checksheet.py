@@ -17,6 +17,7 @@ CURES = {
     "run": "is shared by all samples of a run and shrinks only with more runs",
     "stock": "is shared by all runs from one stock and shrinks only with another stock",
 }
+NARROW = 12  # columns that are left at least for a text beside a table
 HEAD = 14  # columns of a heading before it goes on in the next line
 
 
@@ -26,7 +27,7 @@ def check_sheet(study: Study, found: Checkup) -> str:
         list(_head(study, found)),
         list(_laws(study, found)),
         list(_half_lives(study, found)),
-        list(_budget(study, found)),
+        *(list(_budget(found, reading.name)) for reading in study.readings),
         list(_read_as(found.read_as, "Read from the file")),
         list(_read_as(found.defaults, "Not in the file, so taken as")),
         list(_list("Warnings", found.warnings)),
@@ -88,8 +89,9 @@ def _constant_rows(constant: KnownConstant, time_unit: str) -> Iterator[tuple[st
     unit = constant.unit or units.unit_of(constant.dimension, time_unit)
     stated = constant.stated
     if constant.energy is not None and constant.reference_temperature is not None:
-        at = units.show(constant.reference_temperature, "degC")
-        stated += f"; at {at}, activation energy {_range(constant.energy, 'kJ/mol')}"
+        if "at temperature" not in stated:
+            stated += f", at {units.show(constant.reference_temperature, 'degC')}"
+        stated += f"; activation energy {_range(constant.energy, 'kJ/mol')}"
     yield constant.name, deduced, _range(constant.value, unit), stated
     if constant.after is not None:
         yield "", "", _range(constant.after, unit, 2), "after the pilots"
@@ -113,7 +115,7 @@ def _table(head: Sequence[str], rows: Sequence[Sequence[str]]) -> Iterator[str]:
     widths = [max(len(row[i]) for row in [head, *rows]) for i in range(len(head) - 1)]
     for row in [head, *rows]:
         lead = "      " + "".join(f"{cell:<{width}}  " for cell, width in zip(row, widths, strict=False))
-        room = max(wording.WIDTH - len(lead), 24)
+        room = max(wording.WIDTH - len(lead), NARROW)
         yield from _hung(lead, row[-1], room)
 
 
@@ -198,7 +200,11 @@ def _shortest_and_longest(study: Study, law: LawFound, unit: str) -> str:
 
 
 def _conditions(study: Study, conditions: Sequence[tuple[str, float]]) -> str:
-    return ", ".join(f"{name} {units.show(x, study.condition(name).unit)}" for name, x in conditions)
+    return ", ".join(f"{name} {_amount(x, study.condition(name).unit)}" for name, x in conditions)
+
+
+def _amount(value: float, unit: str) -> str:
+    return units.show(value, unit) if unit == "degC" else f"{_number(units.convert(value, unit), 3)} {unit}"
 
 
 def _free(study: Study, found: HalfLife) -> str:
@@ -208,14 +214,13 @@ def _free(study: Study, found: HalfLife) -> str:
 # errors
 
 
-def _budget(study: Study, found: Checkup) -> Iterator[str]:
-    for reading in study.readings:
-        budgets = [b for b in found.budgets if b.reading == reading.name]
-        if budgets:
-            yield f"WHERE THE ERROR OF A TYPICAL SAMPLE COMES FROM: {reading.name}"
-            yield from wording.wrapped(_said(budgets[0], found.time_unit), "  ")
-            if len(budgets) > 1:
-                yield from _budget_table(budgets, found.time_unit)
+def _budget(found: Checkup, reading: str) -> Iterator[str]:
+    budgets = [budget for budget in found.budgets if budget.reading == reading]
+    if budgets:
+        yield f"WHERE THE ERROR OF A TYPICAL SAMPLE COMES FROM: {reading}"
+        yield from wording.wrapped(_said(budgets[0], found.time_unit), "  ")
+    if len(budgets) > 1:
+        yield from _budget_table(budgets, found.time_unit)
 
 
 def _said(budget: Budget, unit: str) -> str:
@@ -274,7 +279,7 @@ def _read_as(lines: Sequence[ReadAs], title: str) -> Iterator[str]:
     for line in lines:
         text = f"{line.written}: {line.meaning}" if line.written else line.meaning
         lead = f"  {line.where:<{width}}  "
-        yield from _hung(lead, text, max(wording.WIDTH - len(lead), 24))
+        yield from _hung(lead, text, max(wording.WIDTH - len(lead), NARROW))
 
 
 def _list(title: str, lines: Sequence[str]) -> Iterator[str]:

@@ -181,12 +181,13 @@ def _shown(study: Study, laws: list[LawFound]) -> float:
 def _curves(mind: _Mind, middle: np.ndarray, end: float) -> list[Curve]:
     times = np.linspace(0.0, end, POINTS)
     seen = mind.course.see(mind.u, middle[None], times[None])
+    centre = mind.course.see(mind.middle[None], middle[None], times[None]).mean[0]
     solved = seen.mean[seen.trouble == 0]
     curves = []
     for column, reading in enumerate(mind.study.readings if len(solved) else ()):
-        fan = np.quantile(solved[:, :, column], [0.05, 0.5, 0.95], axis=0, method="hazen")
-        low, centre, high = (tuple(float(x) for x in row) for row in fan)
-        curves.append(Curve(1, mind.candidate.name, reading.name, tuple(times.tolist()), centre, low, high))
+        fan = np.quantile(solved[:, :, column], [0.05, 0.95], axis=0, method="hazen")
+        low, high, line = (tuple(float(x) for x in row) for row in (*fan, centre[:, column]))
+        curves.append(Curve(1, mind.candidate.name, reading.name, tuple(times.tolist()), line, low, high))
     return curves
 
 

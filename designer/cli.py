@@ -26,6 +26,7 @@ app = typer.Typer(
 )
 
 FAILED = 2  # exit status of every expected error
+STOPPED = 130  # exit status after Ctrl-C, as shells have it
 BAR = 30  # characters of a bar of progress
 SMALL_STUDIES = 100  # virtual studies of each candidate behind a figure when the effort is small
 StudyPath = Annotated[Path, typer.Argument(metavar="STUDY", help="the study's folder, or its study.toml")]
@@ -53,7 +54,25 @@ def main() -> None:
     for stream in (sys.stdout, sys.stderr):
         if hasattr(stream, "reconfigure"):
             stream.reconfigure(encoding="utf-8", errors="replace")
-    app()
+    try:
+        sys.exit(app(prog_name="aliquot", standalone_mode=False))
+    except typer.Abort:
+        sys.exit(STOPPED)
+    except Exception as error:
+        if not hasattr(error, "format_message"):  # only a command that was typed wrongly has one
+            raise
+        sys.exit(_mistyped(error))
+
+
+def _mistyped(error: Any) -> int:
+    """Say what is wrong with the command as typed, on standard error or as the one JSON document."""
+    if "--json" not in sys.argv:
+        error.show()
+        return FAILED
+    try:
+        fail([Problem("", error.format_message())], as_json=True)
+    except typer.Exit:
+        return FAILED
 
 
 @app.callback()
@@ -166,7 +185,10 @@ def check(
         bool, typer.Option(help="draw the predicted curves into STUDY/figures/check.png")
     ] = True,
 ) -> None:
-    """Say back what the study file means: laws, half-lives, curves, where errors come from."""
+    """Check a study file and say back what it means.
+
+    Laws, half-lives, predicted curves, where the error of a sample comes from, and cautions.
+    """
     with told(as_json):
         from designer import studyfile
         from designer.loading import load_study
@@ -183,7 +205,7 @@ def check(
 
             drawn = studyfile.locate(study).parent / "figures" / "check.png"
             drawn.parent.mkdir(exist_ok=True)
-            check_figure(loaded, found).savefig(drawn)
+            check_figure(loaded, found).savefig(drawn, metadata={"Software": None})
         if as_json:
             from designer.checkdocument import check_document
 

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-from designer import units
+from designer import units, wording
 from designer.findings import Budget, Checkup
 from designer.records import Reading, Study
 
@@ -38,12 +38,14 @@ def check_figure(study: Study, found: Checkup) -> Figure:
     rows = figure.subplots(len(study.readings), 2, squeeze=False, width_ratios=(3, 2))
     for row, reading in zip(rows, study.readings, strict=True):
         _curves(row[0], study, found, reading)
-        _budget(row[1], [b for b in found.budgets if b.reading == reading.name])
+        _budget(row[1], [b for b in found.budgets if b.reading == reading.name], _sources(found))
     handles, labels = rows[0][0].get_legend_handles_labels()
     figure.legend(
         handles, labels, loc="outside lower center", ncols=min(3, max(1, len(labels))), frameon=False
     )
-    at = ", ".join(f"{name} {units.show(value, study.condition(name).unit)}" for name, value in found.middle)
+    at = ", ".join(
+        f"{name} {wording.amount(value, study.condition(name).unit)}" for name, value in found.middle
+    )
     figure.suptitle(f"{found.title}\nat {at}" if found.title else f"at {at}", fontsize=10)
     return figure
 
@@ -71,9 +73,13 @@ def _curves(axes: Axes, study: Study, found: Checkup, reading: Reading) -> None:
     axes.set_title("middle and 5 to 95 % of the belief", fontsize=8)
 
 
-def _budget(axes: Axes, budgets: list[Budget]) -> None:
+def _sources(found: Checkup) -> list[str]:
+    """Every source of error, in the order in which all bars show them."""
+    return list(dict.fromkeys(share.source for budget in found.budgets for share in budget.shares))
+
+
+def _budget(axes: Axes, budgets: list[Budget], sources: list[str]) -> None:
     """Stacked bars: one per candidate, shares of the variance in per cent."""
-    sources = list(dict.fromkeys(share.source for budget in budgets for share in budget.shares))
     names = [budget.candidate for budget in budgets]
     start = [0.0] * len(budgets)
     for number, source in enumerate(sources):

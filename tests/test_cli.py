@@ -47,8 +47,8 @@ CANDIDATES
       per mole of reaction: A -1, P +1
       rate of reaction = k*[A]
          unit from the rate  middle and 90 % range    as stated
-      k  1/min               0.1 (0.05 to 0.2) 1/min  0.1 1/min, give or take a factor of 2 (90 %);
-                                                      at 25 degC, activation energy 80 kJ/mol
+      k  1/min               0.1 (0.05 to 0.2) 1/min  0.1 1/min, give or take a factor of 2 (90 %),
+                                                      at 25 degC; activation energy 80 kJ/mol
                                                       (exact)
 
 HALF-LIFE UNDER THE WHOLE LAW (middle and 90 % range of the belief)
