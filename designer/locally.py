@@ -90,9 +90,9 @@ def local_ratings(bench: Bench, offer: Allowed, design: Design) -> tuple[LocalRa
         if not law.structural or any(_is_shared_error(name) for name in law.structural):
             continue
         whole = sensitivities(law, *everything)
-        whole = Sensitivities(whole.jacobian[:, real], whole.variance[:, real])
+        jacobian, variance = whole.jacobian[:, real], np.asarray(whole.variance)[:, real]
         count = len(offered[1])
-        plan = Sensitivities(whole.jacobian[count:], whole.variance[count:])
+        whole, plan = Sensitivities(jacobian, variance), Sensitivities(jacobian[count:], variance[count:])
         for kind, name in [("D", ""), *(("c", n) for n, _ in bench.asked if n in law.structural)]:
             rating = _one(kind, name, law, plan, whole)
             if rating is not None:
