@@ -25,8 +25,10 @@ if TYPE_CHECKING:
     )
     from designer.figures import check_figure
     from designer.findings import Checkup
+    from designer.frames import ratings, samples
     from designer.loading import load_study
     from designer.outcomes import Plan
+    from designer.planfigure import plan_figure
     from designer.planning import plan
     from designer.records import Run, Schedule, Study
 
@@ -46,6 +48,9 @@ __all__ = [
     "check_figure",
     "load_study",
     "plan",
+    "plan_figure",
+    "ratings",
+    "samples",
 ]
 
 _ROOMS = {
@@ -64,6 +69,9 @@ _ROOMS = {
     "check_figure": "figures",
     "load_study": "loading",
     "plan": "planning",
+    "plan_figure": "planfigure",
+    "ratings": "frames",
+    "samples": "frames",
 }
 _OTHER_NAMES = {"check": "checkup"}  # name here -> name in its module
 
