@@ -325,6 +325,16 @@ class Kernel:
         start: warm start of each data set; without it the structural nodes are scanned. free (draw,
         structural) is 1 for structural coordinates that move and 0 for those held at the start.
         """
+        return self.fit_and_blocks(design, readings, start, free)[0]
+
+    def fit_and_blocks(
+        self,
+        design: Design,
+        readings: Readings,
+        start: Point | None = None,
+        free: np.ndarray | None = None,
+    ) -> tuple[Fit, Quadratic]:
+        """``fit``, and the blocks of F at each optimum, from which its neighbourhood can be worked out."""
         count = np.shape(readings.values)[0]
         if start is None:
             u = self.best_nodes(design, readings, 1)[:, 0]
@@ -340,7 +350,7 @@ class Kernel:
                 whole[rest] = part
         if not self.law.second_order:
             fit = self._in_lanes(self._exactly, state, design, readings, free)
-        return fit
+        return fit, state.near
 
     def _run(self, design: Design, readings: Readings, free: np.ndarray, state: State) -> tuple[State, Fit]:
         return self._in_lanes(self._advance, state, design, readings, free)

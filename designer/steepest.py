@@ -20,8 +20,8 @@ import numpy as np
 
 from designer import beliefs
 from designer.arrays import Array, jax, jnp
-from designer.evidence import Factor, Point, Quadratic, eliminate, quadratic, total_loss
-from designer.likelihood import Design, Readings
+from designer.evidence import Factor, Point, Quadratic, eliminate, total_loss
+from designer.likelihood import Design, Readings, reading_losses
 from designer.signals import Law
 from designer.virtual import Bench, Scores, Truth, probabilities, readings_of, simulate
 
@@ -38,67 +38,103 @@ class Worth(NamedTuple):
     times: np.ndarray
 
 
-def evidence_and_spread(
-    law: Law, asked: tuple[str, ...], point: Point, design: Design, readings: Readings
-) -> tuple[Array, Quadratic]:
-    """ln Z by Laplace at a fixed point, ln variance of each asked ln-constant (zero where the law has
-    none) and F's blocks at that point. Gauss-Newton's matrix for laws without cheap second derivatives."""
-    there, _, _ = quadratic(law, point, design, readings, law.second_order)
-    factor = eliminate(there)
-    log_evidence = -there.value - factor.log_determinant / 2
-    variances = []
+def evidence_and_spread(law: Law, asked: tuple[str, ...], u: Array, near: Quadratic) -> Array:
+    """ln Z by Laplace and ln variance of each asked ln-constant (0 where the law has none), from the
+    blocks of F at the point whose structural coordinates are ``u``: (1 + asked,)."""
+    factor = eliminate(near)
+    found = [-near.value - factor.log_determinant / 2]
     for name in asked:
         if name == ALL:
-            variances.append(_generalised(law, point, factor))
-            continue
-        if name not in law.structural:
-            variances.append(jnp.zeros(()))
-            continue
-        place = law.structural.index(name)
-        slope = beliefs.log_slope(law.candidate.constant(name).belief, point.u[place])
-        variances.append(jnp.log(slope**2 * factor.covariance[place, place]))
-    return jnp.stack([log_evidence, *variances]), there
+            found.append(_generalised(law, u, factor))
+        elif name not in law.structural:
+            found.append(jnp.zeros(()))
+        else:
+            place = law.structural.index(name)
+            slope = beliefs.log_slope(law.candidate.constant(name).belief, u[place])
+            found.append(jnp.log(slope**2 * factor.covariance[place, place]))
+    return jnp.stack(found)
 
 
-def _generalised(law: Law, point: Point, factor: Factor) -> Array:
+def _generalised(law: Law, u: Array, factor: Factor) -> Array:
     """ln of the generalised variance of the logarithms of all constants, per constant (measure D)."""
     if not law.structural:
         return jnp.zeros(())
     names = [constant.name for constant in law.candidate.constants]
     slopes = [
-        jnp.log(jnp.abs(beliefs.log_slope(law.candidate.constant(name).belief, point.u[place])))
+        jnp.log(jnp.abs(beliefs.log_slope(law.candidate.constant(name).belief, u[place])))
         for place, name in enumerate(law.structural)
         if name in names
     ]
     return (2 * sum(slopes, jnp.zeros(())) - factor.structural) / len(law.structural)
 
 
+def _curvature(law: Law, weight: Array, x: Array, run: Design, readings: Readings) -> Array:
+    """<weight, d2L/dx2> of one run's loss L: the sum over coordinates of its second derivative along the
+    coordinate and the matching row of ``weight`` (x, x)."""
+    structural = len(law.structural)
+
+    def lost(at: Array) -> Array:
+        signal = law.read(at[:structural], at[structural:], run.conditions, run.times)
+        return reading_losses(law, signal, readings, run.mask).sum()
+
+    def along(v: Array, w: Array) -> Array:
+        return jax.jvp(lambda at: jax.jvp(lost, (at,), (v,))[1], (x,), (w,))[1]
+
+    return jax.vmap(along)(jnp.eye(x.shape[0]), weight).sum()
+
+
+def _arrow(pulled: Quadratic) -> Array:
+    """Derivatives in the blocks of an arrow as one symmetric matrix for each run: (run, x, x)."""
+    runs = pulled.zz.shape[0]
+    uu = jnp.broadcast_to((pulled.uu + pulled.uu.T) / 2, (runs, *pulled.uu.shape))
+    zz = (pulled.zz + jnp.swapaxes(pulled.zz, 1, 2)) / 2
+    top = jnp.concatenate([uu, pulled.uz / 2], axis=2)
+    bottom = jnp.concatenate([jnp.swapaxes(pulled.uz, 1, 2) / 2, zz], axis=2)
+    return jnp.concatenate([top, bottom], axis=1)
+
+
 @partial(jax.jit, static_argnums=(0, 1))
 def _pull_evidence(
-    law: Law, asked: tuple[str, ...], point: Point, design: Design, readings: Readings, weight: Array
+    law: Law,
+    asked: tuple[str, ...],
+    point: Point,
+    near: Quadratic,
+    design: Design,
+    readings: Readings,
+    weight: Array,
 ) -> tuple[Array, Array, Array]:
     """Gradient of the sum of weight (draw, 1 + asked) times (ln Z, ln variances), in conditions, times
     and values, the optimum moving with them."""
 
-    def one(at: Point, conditions: Array, times: Array, values: Array, side: Array, w: Array) -> Array:
-        moved = Design(conditions, times, design.mask)
-        terms, there = evidence_and_spread(law, asked, at, moved, Readings(values, side))
-        return (w * terms).sum(), there
+    def terms(u: Array, blocks: Quadratic, w: Array) -> Array:
+        return (w * evidence_and_spread(law, asked, u, blocks)).sum()
+
+    def linear(
+        at: Point, pulled: Array, arrow: Array, conditions: Array, times: Array, values: Array, side: Array
+    ) -> Array:
+        """What the terms owe to F and its Hessian, with the derivatives in these held."""
+        moved, read = Design(conditions, times, design.mask), Readings(values, side)
+        x = jnp.concatenate([jnp.broadcast_to(at.u, (at.z.shape[0], at.u.shape[0])), at.z], axis=1)
+        bends = jax.vmap(partial(_curvature, law))(arrow, x, moved, read)
+        return pulled * total_loss(law, at, moved, read) + bends.sum()
 
     def along(at: Point, way: Point, conditions: Array, times: Array, values: Array, side: Array) -> Array:
         """dF/d(u, z) in the direction ``way``."""
-        moved = Design(conditions, times, design.mask)
-        objective = lambda p: total_loss(law, p, moved, Readings(values, side))  # noqa: E731
-        return jax.jvp(objective, (at,), (way,))[1]
+        moved, read = Design(conditions, times, design.mask), Readings(values, side)
+        return jax.jvp(lambda p: total_loss(law, p, moved, read), (at,), (way,))[1]
 
-    def pull(at: Point, values: Array, side: Array, w: Array) -> tuple[Array, Array, Array]:
+    def pull(
+        at: Point, blocks: Quadratic, values: Array, side: Array, w: Array
+    ) -> tuple[Array, Array, Array]:
         place = (design.conditions, design.times, values)
-        (pulled, *direct), there = jax.grad(one, argnums=(0, 1, 2, 3), has_aux=True)(at, *place, side, w)
-        way = eliminate(there._replace(u=pulled.u, z=pulled.z))
-        implied = jax.grad(along, argnums=(2, 3, 4))(at, Point(way.u, way.z), *place, side)
+        in_u, in_blocks = jax.grad(terms, argnums=(0, 1))(at.u, blocks, w)
+        held = (in_blocks.value, _arrow(in_blocks))
+        in_point, *direct = jax.grad(linear, argnums=(0, 3, 4, 5))(at, *held, *place, side)
+        moving = eliminate(blocks._replace(u=in_point.u + in_u, z=in_point.z))  # -H^-1 dG/dp
+        implied = jax.grad(along, argnums=(2, 3, 4))(at, Point(moving.u, moving.z), *place, side)
         return tuple(a + b for a, b in zip(direct, implied, strict=True))
 
-    conditions, times, values = jax.vmap(pull)(point, readings.values, readings.side, weight)
+    conditions, times, values = jax.vmap(pull)(point, near, readings.values, readings.side, weight)
     return conditions.sum(0), times.sum(0), values
 
 
@@ -139,7 +175,8 @@ def gradient(
             weight = np.concatenate([d_evidence[some, row, None], own[some]], axis=1) * alive[:, None]
             at = Point(fit.u[some], fit.z[some])
             read = Readings(readings.values[some], readings.side[some])
-            pulled = _pull_evidence(law, asked, at, design, read, weight)
+            near = jax.tree.map(lambda x, some=some: x[some], scores.blocks[row])
+            pulled = _pull_evidence(law, asked, at, near, design, read, weight)
             conditions += np.asarray(pulled[0])
             times += np.asarray(pulled[1])
             d_values[some[alive > 0]] += np.asarray(pulled[2])[alive > 0]

@@ -17,7 +17,7 @@ import numpy as np
 
 from designer import beliefs, gates, signals
 from designer.arrays import Array, jax, jnp
-from designer.evidence import Fit, Kernel, Point
+from designer.evidence import Fit, Kernel, Point, Quadratic
 from designer.layout import Layout, layout
 from designer.likelihood import Design, Readings, limits
 from designer.records import Z95, Candidate, Study
@@ -157,7 +157,7 @@ class Scores(NamedTuple):
     each asked constant under the true law (nan where that law has none); spread: SD of ln k under the
     true law (study, asked); overall_width: the same half-width from the generalised variance of all
     constants, per constant (study, 1), which measure D asks for; doubtful: a value that counts is
-    still flagged; fits of each candidate.
+    still flagged; fits of each candidate, and the blocks of F at their optima (not if careful).
     """
 
     truth: np.ndarray
@@ -169,6 +169,7 @@ class Scores(NamedTuple):
     repaired: np.ndarray
     unsolved: np.ndarray
     fits: tuple[Fit, ...]
+    blocks: tuple[Quadratic, ...] = ()
 
 
 def conclude(
@@ -183,10 +184,14 @@ def conclude(
     counts = [len(truth.u) for truth in truths]
     truth = np.repeat(np.arange(len(truths)), counts)
     fits: dict[int, Fit] = {}
+    blocks: list[Quadratic] = []
     for index in bench.listed:
         start = None if starts is None else starts[index]
-        fitter = gates.careful_fit if careful else Kernel.fit
-        fits[index] = fitter(bench.kernels[index], design, readings, start)
+        if careful:
+            fits[index] = gates.careful_fit(bench.kernels[index], design, readings, start)
+        else:
+            fits[index], near = bench.kernels[index].fit_and_blocks(design, readings, start)
+            blocks.append(near)
     values = np.full((len(truth), len(bench.laws)), -np.inf)
     for index, fit in fits.items():
         values[:, index] = np.where(fit.trouble > 0, -np.inf, fit.log_evidence)
@@ -196,8 +201,9 @@ def conclude(
     unsolved = np.array([(fits[i].trouble > 0).sum() if i in fits else 0 for i in range(len(bench.laws))])
     spread = _spreads(bench, truth, fits)
     overall = Z95 * _overall_spread(bench, truth, fits)
+    found = tuple(fits.values())
     return Scores(
-        truth, values, Z95 * spread, spread, overall, doubtful, repaired, unsolved, tuple(fits.values())
+        truth, values, Z95 * spread, spread, overall, doubtful, repaired, unsolved, found, tuple(blocks)
     )
 
 
@@ -243,7 +249,7 @@ def slopes(law: Law, name: str, u: np.ndarray) -> np.ndarray | None:
 
 def _spreads(bench: Bench, truth: np.ndarray, fits: dict[int, Fit]) -> np.ndarray:
     spread = np.full((len(truth), max(len(bench.asked), 1)), np.nan)
-    names = [name for name, _ in bench.asked] or [None]
+    names: list[str | None] = [name for name, _ in bench.asked] or [None]
     for row, index in enumerate(bench.listed):
         mine = truth == row
         law, fit = bench.laws[index], fits[index]
