@@ -139,19 +139,21 @@ def _local(plan: Plan) -> list[str]:
     if not plan.local:
         return []
     kinds = list(dict.fromkeys(local.kind for local in plan.local))
-    cells = {
-        (local.candidate, local.kind): f"{local.value:.3g} ({100 * local.margin:.2g} %)"
-        for local in plan.local
-    }
+    cells = {(x.candidate, x.kind): f"{x.value:.3g} ({_more(x.margin)})" for x in plan.local}
     names = dict.fromkeys(local.candidate for local in plan.local)
     told = (
         "Local Fisher information at the middle of the beliefs (a sample as the unit, beliefs and errors of "
-        "the runs left out; in brackets by how much any other plan within the limits could be better at "
-        "most, by this measure):"
+        "the runs left out; in brackets how much better any other plan within the limits could be at most, "
+        "by this measure):"
     )
     head = ["candidate", *(" for ".join(kind.split(" ", 1)) for kind in kinds)]
     rows = [[name, *(cells.get((name, kind), wording.NONE) for kind in kinds)] for name in names]
     return [*_bullet(told), *columns(head, rows, indent="    ")]
+
+
+def _more(margin: float) -> str:
+    """``6.3 %`` better, or from twice as good on ``11 times`` as good."""
+    return f"{100 * margin:.2g} %" if margin < 1 else f"{1 + margin:.2g} times"
 
 
 def _together(pair: Inseparable) -> str:

@@ -13,6 +13,7 @@ from designer.outcomes import Estimate, Plan, Rating
 from designer.records import Condition, Schedule, Study
 
 APART = 2.0  # standard errors
+LOSS = 0.1  # of mean probability, from which a plan that looks good on the constants is called out
 SAME_START = 1.001  # starting conditions within this factor are the same
 FULLER = 1.5  # a lever spans more where the ratio of its ends is larger by this factor
 
@@ -48,14 +49,24 @@ def _order(figure: Estimate) -> float:
     return figure.value if isfinite(figure.value) else -1.0
 
 
+def closer(rating: Rating, other: Rating) -> list[tuple[str, str]]:
+    """(candidate, constant) pairs whose SE of ln k is clearly smaller under ``other`` when that
+    candidate is true."""
+    its = {(s.candidate, s.constant): s.spread for s in other.spreads}
+    return [
+        (s.candidate, s.constant)
+        for s in rating.spreads
+        if (s.candidate, s.constant) in its and difference(its[s.candidate, s.constant], s.spread) < -APART
+    ]
+
+
 def is_trap(rating: Rating, other: Rating) -> bool:
-    """Whether ``other`` pins every constant down at least as well as ``rating`` (one of them better)
-    and yet gives the right law a lower mean probability."""
-    if difference(other.mean_probability, rating.mean_probability) > -APART:
+    """Whether ``other`` pins the constants down more closely under half of the laws or more, each taken
+    for true, and yet gives the right law a mean probability lower by ``LOSS`` and beyond its error."""
+    gap = rating.mean_probability.value - other.mean_probability.value
+    if not gap > LOSS or difference(other.mean_probability, rating.mean_probability) > -APART:
         return False
-    mine, its = pinned(rating), pinned(other)
-    gaps = [difference(its[name], mine[name]) for name in mine if name in its]
-    return bool(gaps) and max(gaps) < APART and min(gaps) < -APART
+    return bool(rating.spreads) and len(closer(rating, other)) >= len(rating.spreads) / 2
 
 
 def _against(study: Study, rating: Rating, best: Rating) -> str:
@@ -101,18 +112,18 @@ def _size(rating: Rating, figure: Estimate) -> str:
 
 
 def _trap(study: Study, rating: Rating, other: Rating) -> str:
-    mine, its = pinned(rating), pinned(other)
+    mine = {(s.candidate, s.constant): s.spread for s in rating.spreads}
+    its = {(s.candidate, s.constant): s.spread for s in other.spreads}
     shown = [
-        f"{name} {_size(other, its[name])} against {_size(rating, mine[name])}"
-        for name in mine
-        if name in its
+        f"{constant} {wording.estimate(its[name, constant])} against "
+        f"{wording.estimate(mine[name, constant])} if '{name}' is true"
+        for name, constant in closer(rating, other)
     ]
-    kind = "half-width of" if rating.precision else "SE of ln"
     chance = f"{wording.estimate(other.mean_probability)} against {wording.estimate(rating.mean_probability)}"
     return (
-        f"'{other.name}' looks better on the constants ({kind} {'; '.join(shown)}) but gives the right law a "
-        f"mean probability of {chance}: {_cause(study, rating.schedule, other.schedule)}, so it measures a "
-        "constant closely under whichever law is assumed and cannot tell which law that is."
+        f"'{other.name}' looks better on the constants (SE of ln {'; '.join(shown)}) but gives the right law "
+        f"a mean probability of {chance}: {_cause(study, rating.schedule, other.schedule)}, so it measures a "
+        "constant closely under a law that is taken for granted and cannot tell which law that is."
     )
 
 

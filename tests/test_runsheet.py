@@ -13,7 +13,7 @@ import handmade
 import pytest
 
 from designer import expectations, reasons, runsheet, wording
-from designer.outcomes import Estimate, Inseparable, LocalRating, Predicted
+from designer.outcomes import Estimate, Inseparable, LocalRating, Predicted, Spread
 from designer.records import Schedule
 from designer.sampletable import cell
 
@@ -174,11 +174,15 @@ def test_broken_limits_are_named_below_their_plan(sheet: str) -> None:
 
 def test_the_trap_is_named_with_its_reason(sheet: str) -> None:
     told = " ".join(sheet.split())
+    # SE of ln k of the handmade ratings: half-width/1.96
     assert (
-        "'three flooded repeats' looks better on the constants (half-width of k 2.40 ± 0.07 % against "
-        "4.10 ± 0.07 %) but gives the right law a mean probability of 0.550 ± 0.005 against 0.970 ± 0.005: "
-        "its runs all start from the same conditions, so it measures a constant closely under whichever law "
-        "is assumed and cannot tell which law that is." in told
+        "'three flooded repeats' looks better on the constants (SE of ln k 0.0122 ± 0.0004 against "
+        "0.0209 ± 0.0004 if 'first order in both' is true; k" in told
+    )
+    assert (
+        "but gives the right law a mean probability of 0.550 ± 0.005 against 0.970 ± 0.005: its runs all "
+        "start from the same conditions, so it measures a constant closely under a law that is taken for "
+        "granted and cannot tell which law that is." in told
     )
     assert told.count("looks better on the constants") == 1  # the usual schedule is worse on both
 
@@ -222,6 +226,26 @@ def test_a_plan_as_good_on_the_law_is_no_trap() -> None:
     assert reasons.is_trap(mine, handmade.rating(Schedule(handmade.schedule().runs), 0.5, 0.02, 9000.0))
     assert not reasons.is_trap(mine, handmade.rating(handmade.schedule(), 0.97, 0.02, 9000.0))
     assert not reasons.is_trap(mine, handmade.rating(handmade.schedule(), 0.5, 0.06, 9000.0))
+    assert not reasons.is_trap(mine, handmade.rating(handmade.schedule(), 0.9, 0.02, 9000.0))  # a small loss
+
+
+def test_looking_better_under_half_of_the_laws_is_enough_for_a_trap() -> None:
+    # measured on the ester study: SE of ln k under each true law, and mean probability of the right law
+    mine = handmade.rating(handmade.schedule(), 0.997, 0.033, 9000.0)
+    flooded = handmade.rating(handmade.schedule(), 0.44, 0.064, 9000.0)
+    mine = replace(mine, spreads=spreads(0.0150, 0.0177, 0.0253, 0.0088))
+    flooded = replace(flooded, spreads=spreads(0.0131, 0.0131, 0.0885, 0.0152))
+    assert reasons.closer(mine, flooded) == [
+        ("first order in both", "k"),
+        ("two hydroxide per ester", "k"),
+    ]
+    assert reasons.is_trap(mine, flooded)
+    assert not reasons.is_trap(mine, replace(flooded, spreads=spreads(0.0131, 0.0177, 0.0885, 0.0152)))
+
+
+def spreads(*values: float) -> tuple[Spread, ...]:
+    laws = zip(handmade.LAWS, values, strict=True)
+    return tuple(Spread(law, "k", Estimate(value, 0.0002)) for law, value in laws)
 
 
 def test_pairs_that_no_plan_separates_come_with_the_lever_that_would() -> None:
@@ -247,12 +271,12 @@ def test_numerical_trouble_is_counted_and_shown(sheet: str) -> None:
 
 
 def test_local_criteria_say_what_they_leave_out() -> None:
-    local = (LocalRating("first", "D", 12.345678, 0.0634), LocalRating("second", "c k", 0.5, 0.25))
+    local = (LocalRating("first", "D", 12.345678, 0.0634), LocalRating("second", "c k", 0.5, 9.6))
     lines = runsheet.text(handmade.study(), replace(handmade.plan(), local=local)).splitlines()
     start = lines.index("    candidate  D             c for k")
     assert lines[start + 1 : start + 3] == [
         "    first      12.3 (6.3 %)  –",
-        "    second     –             0.5 (25 %)",
+        "    second     –             0.5 (11 times)",
     ]
     assert "beliefs and errors of the runs left out" in " ".join(" ".join(lines).split())
 
@@ -266,9 +290,6 @@ def test_the_sheet_of_a_study_without_a_precision_aim_leaves_it_out() -> None:
     )
     text = runsheet.text(handmade.study(), bare)
     assert "half of its 95 % range" not in text and "within" not in text.splitlines()[4]
-    assert "SE of ln k of 'first order in both' 0.0122 ± 0.0004 against 0.0209 ± 0.0004" in " ".join(
-        text.split()
-    )
     assert expectations.expectations(handmade.study(), bare, {})
 
 
