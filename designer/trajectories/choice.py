@@ -27,6 +27,8 @@ def choose(candidate: Candidate, scope: frozenset[str]) -> Path:
     network = linear.recognise(candidate)
     if network is not None:
         return linear.path(candidate, network)
+    if any(structure.ignored(step) for step in candidate.steps):
+        return _integrator(candidate)  # stops abruptly, between the steps of any fixed grid
     return implicit.path(candidate, fallback=_integrator(candidate))
 
 

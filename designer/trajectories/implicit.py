@@ -65,12 +65,9 @@ class System:
         amount = amount_of(start)
         for step, shares in zip(self.candidate.steps, self.basis.shares, strict=True):
             speed = factor * rate(step, values, now, start, time)
-            for name, number in step.equation.stoichiometry:
-                if number < 0 and not structure.vanishes_with(step.rate, name):
-                    level = jnp.maximum(now[name], 0.0)
-                    shut = level / (level + RUNNING_OUT * amount)
-                    turning = structure.may_turn(self.candidate, step.rate)
-                    speed = speed * (jnp.where(speed > 0, shut, 1.0) if turning else shut)
+            for name, direction in structure.ignored(step):
+                level = now[name] / (jnp.abs(now[name]) + RUNNING_OUT * amount)  # pulls back from below 0
+                speed = jnp.where(direction * speed > 0, speed * level, speed)
             total = [t + share * speed if share else t for t, share in zip(total, shares, strict=True)]
         return total
 
@@ -85,6 +82,26 @@ def amount_of(start: Mapping[str, Array]) -> Array:
 
 def system(candidate: Candidate) -> System:
     return System(candidate, structure.basis(candidate))
+
+
+def finished(
+    network: System,
+    values: Mapping[str, Array],
+    start: Mapping[str, Array],
+    factor: Array,
+    times: Array,
+    slope: Slope,
+    extents: list[Array],
+    error: Array,
+) -> Curve:
+    """The curve of these extents; trouble where the error or an amount below 0 is too large to ignore."""
+    now = network.concentrations(start, from_rates(slope, extents, times))
+    amount = amount_of(start)
+    below = jnp.min(jnp.stack([jnp.min(value + 0 * times) for value in now.values()]))
+    good = (error < LARGEST_ERROR * amount) & (below > -LARGEST_ERROR * amount)  # false for NaN
+    now = {name: held(value) for name, value in now.items()}
+    rates = rates_along(network.candidate, values, now, start, factor, times)
+    return Curve(now, rates, jnp.where(good, 0.0, 1.0))
 
 
 def marks(refined: int = 1) -> np.ndarray:
@@ -110,11 +127,7 @@ def path(
             return network.slope(values, start, factor, extents, time)
 
         extents, error = _march(slope, network.size, jax.lax.stop_gradient(times), shares, columns)
-        extents = from_rates(slope, extents, times)
-        now = {name: held(value) for name, value in network.concentrations(start, extents).items()}
-        rates = rates_along(candidate, values, now, start, factor, times)
-        good = error < LARGEST_ERROR * amount_of(start)
-        return Curve(now, rates, jnp.where(good & jnp.isfinite(error), 0.0, 1.0))
+        return finished(network, values, start, factor, times, slope, extents, error)
 
     return Path("implicit", False, solve, fallback)
 

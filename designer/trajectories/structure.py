@@ -165,6 +165,24 @@ def vanishes_with(node: Node, species: str) -> bool:
     return False
 
 
+def ignored(step: Step) -> tuple[tuple[str, int], ...]:
+    """Species that can run out without slowing the step, which then stops abruptly.
+
+    Pairs (species, direction): 1 where the step going forward ignores what it uses up, -1 where it does so
+    going backward.
+    """
+    found: dict[tuple[str, int], None] = {}
+    for sign, term in terms(step.rate):
+        parts = [factor for factor, _ in factors(term)]
+        either = not all(_surely_positive(factor) for factor in parts)
+        for name, number in step.equation.stoichiometry:
+            for direction in (1, -1):
+                goes = either or sign == direction
+                if number * direction < 0 and goes and not vanishes_with(term, name):
+                    found[name, direction] = None
+    return tuple(found)
+
+
 def may_turn(candidate: Candidate, node: Node) -> bool:
     """Whether the rate may be 0 or negative at positive concentrations, by its signs and constants."""
     used = set(expressions.names(node))
