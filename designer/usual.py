@@ -20,6 +20,7 @@ from designer.virtual import Bench, stream
 CONVERSION = 0.9
 DRAWS = 64
 CURVE = 160  # points on the curve from which the time is read
+TIE = 1e-12  # of the whole weight
 
 
 def conversion_time(
@@ -56,7 +57,8 @@ def _curves(law: Law, species: str, u: Array, conditions: Array, times: Array) -
 def _weighted_median(values: np.ndarray, weight: np.ndarray) -> np.ndarray:
     order = np.argsort(values, axis=0, kind="stable")
     running = np.cumsum(weight[order], axis=0)
-    place = (running >= 0.5 * weight.sum()).argmax(0)
+    half = 0.5 * weight.sum() * (1 - TIE)  # rounding, and with it the order of the list, must not decide
+    place = (running >= half).argmax(0)
     columns = np.arange(values.shape[1])
     return values[order[place, columns], columns]
 
