@@ -8,7 +8,8 @@ nested lists of arrays, one array per entry over all lanes, and factorisations a
 from __future__ import annotations
 
 import os
-from collections.abc import Sequence
+from collections.abc import Callable, Iterable, Sequence
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import Any
 
@@ -31,6 +32,14 @@ def keep_compiled(folder: Path) -> None:
     jax.config.update("jax_compilation_cache_dir", str(folder))
     jax.config.update("jax_persistent_cache_min_compile_time_secs", 0.3)
     jax.config.update("jax_persistent_cache_min_entry_size_bytes", 0)
+
+
+def side_by_side(function: Callable[[Any], Any], items: Iterable[Any]) -> list[Any]:
+    """``function`` of every item, in threads, results in order. Compilation and compiled code leave the
+    interpreter free, so laws are compiled and run next to each other."""
+    todo = list(items)
+    with ThreadPoolExecutor(max(1, min(len(todo), os.cpu_count() or 1))) as pool:
+        return list(pool.map(function, todo))
 
 
 def cholesky(matrix: Matrix) -> tuple[Matrix, Array]:

@@ -5,22 +5,24 @@ through the optimum p*(x) of F. With dF/dp = 0 there, the implicit function theo
 
     dG/dx = dG/dx at p*  -  dG/dp H^-1 d2F/dp dx
 
-the second term of which the envelope theorem would miss in ln det H. It is the derivative of one
-differentiable Newton step from where the fit stopped, and needs no third derivative of F in p and x
-together: H^-1 dG/dp is a fixed direction, and d2F/dp dx along it is the gradient of one directional
-derivative of F.
+the second term of which the envelope theorem would miss in ln det H (it is the derivative of one
+differentiable Newton step from where the fit stopped). H^-1 dG/dp is a fixed direction, and d2F/dp dx
+along it is the slope of one directional derivative of F. Of F's Hessian only its sum weighted by dG/dH
+is differentiated, and forward: reverse differentiation of the same thing took seven times as long to
+compile.
 """
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from functools import partial
 from typing import NamedTuple
 
 import numpy as np
 
 from designer import beliefs
-from designer.arrays import Array, jax, jnp
-from designer.evidence import Factor, Point, Quadratic, eliminate, total_loss
+from designer.arrays import Array, jax, jnp, side_by_side
+from designer.evidence import Factor, Point, Quadratic, eliminate
 from designer.likelihood import Design, Readings, reading_losses
 from designer.signals import Law
 from designer.virtual import Bench, Scores, Truth, probabilities, readings_of, simulate
@@ -68,19 +70,58 @@ def _generalised(law: Law, u: Array, factor: Factor) -> Array:
     return (2 * sum(slopes, jnp.zeros(())) - factor.structural) / len(law.structural)
 
 
-def _curvature(law: Law, weight: Array, x: Array, run: Design, readings: Readings) -> Array:
-    """<weight, d2L/dx2> of one run's loss L: the sum over coordinates of its second derivative along the
-    coordinate and the matching row of ``weight`` (x, x)."""
-    structural = len(law.structural)
+class _Place(NamedTuple):
+    """Everything the readings of one run depend on."""
 
-    def lost(at: Array) -> Array:
-        signal = law.read(at[:structural], at[structural:], run.conditions, run.times)
-        return reading_losses(law, signal, readings, run.mask).sum()
+    x: Array
+    conditions: Array
+    times: Array
+    values: Array
+
+
+class _Slope(NamedTuple):
+    """Derivatives of a sum over readings: in x, in conditions, in each time, in each value."""
+
+    x: Array
+    conditions: Array
+    times: Array
+    values: Array
+
+
+def _losses(law: Law, place: _Place, side: Array, mask: Array) -> Array:
+    """Loss of each reading of a run: (time, signal)."""
+    structural = len(law.structural)
+    signal = law.read(place.x[:structural], place.x[structural:], place.conditions, place.times)
+    return reading_losses(law, signal, Readings(place.values, side), mask)
+
+
+def _curved(law: Law, place: _Place, pulled: Array, weight: Array, side: Array, mask: Array) -> Array:
+    """pulled * L + <weight, d2L/dx2> for each reading's loss L: the second part is the sum over
+    coordinates of the second derivative along the coordinate and the matching row of ``weight``."""
+
+    def lost(x: Array) -> Array:
+        return _losses(law, place._replace(x=x), side, mask)
 
     def along(v: Array, w: Array) -> Array:
-        return jax.jvp(lambda at: jax.jvp(lost, (at,), (v,))[1], (x,), (w,))[1]
+        return jax.jvp(lambda at: jax.jvp(lost, (at,), (v,))[1], (place.x,), (w,))[1]
 
-    return jax.vmap(along)(jnp.eye(x.shape[0]), weight).sum()
+    return pulled * lost(place.x) + jax.vmap(along)(jnp.eye(place.x.shape[0]), weight).sum(0)
+
+
+def _forward(each: Callable[[_Place], Array], place: _Place) -> _Slope:
+    """Slopes of the sum of ``each`` (time, signal) by forward differentiation. A reading depends on no
+    other reading's time and value, so one direction serves all times, and one all values."""
+    n, c = place.x.shape[0], place.conditions.shape[0]
+    kinds = n + c + 2
+    ways = _Place(
+        jnp.eye(kinds, n),
+        jnp.eye(kinds, c, -n),
+        jnp.zeros((kinds, *place.times.shape)).at[n + c].set(1.0),
+        jnp.zeros((kinds, *place.values.shape)).at[n + c + 1].set(1.0),
+    )
+    pushed = jax.vmap(lambda way: jax.jvp(each, (place,), (way,))[1])(ways)
+    whole = pushed.sum((1, 2))
+    return _Slope(whole[:n], whole[n : n + c], pushed[n + c].sum(-1), pushed[n + c + 1])
 
 
 def _arrow(pulled: Quadratic) -> Array:
@@ -109,30 +150,29 @@ def _pull_evidence(
     def terms(u: Array, blocks: Quadratic, w: Array) -> Array:
         return (w * evidence_and_spread(law, asked, u, blocks)).sum()
 
-    def linear(
-        at: Point, pulled: Array, arrow: Array, conditions: Array, times: Array, values: Array, side: Array
-    ) -> Array:
-        """What the terms owe to F and its Hessian, with the derivatives in these held."""
-        moved, read = Design(conditions, times, design.mask), Readings(values, side)
-        x = jnp.concatenate([jnp.broadcast_to(at.u, (at.z.shape[0], at.u.shape[0])), at.z], axis=1)
-        bends = jax.vmap(partial(_curvature, law))(arrow, x, moved, read)
-        return pulled * total_loss(law, at, moved, read) + bends.sum()
-
-    def along(at: Point, way: Point, conditions: Array, times: Array, values: Array, side: Array) -> Array:
-        """dF/d(u, z) in the direction ``way``."""
-        moved, read = Design(conditions, times, design.mask), Readings(values, side)
-        return jax.jvp(lambda p: total_loss(law, p, moved, read), (at,), (way,))[1]
-
-    def pull(
-        at: Point, blocks: Quadratic, values: Array, side: Array, w: Array
-    ) -> tuple[Array, Array, Array]:
-        place = (design.conditions, design.times, values)
+    def pull(at: Point, blocks: Quadratic, values: Array, side: Array, w: Array) -> tuple[Array, ...]:
+        d = at.u.shape[0]
+        x = jnp.concatenate([jnp.broadcast_to(at.u, (at.z.shape[0], d)), at.z], axis=1)
+        runs = _Place(x, design.conditions, design.times, values)
         in_u, in_blocks = jax.grad(terms, argnums=(0, 1))(at.u, blocks, w)
-        held = (in_blocks.value, _arrow(in_blocks))
-        in_point, *direct = jax.grad(linear, argnums=(0, 3, 4, 5))(at, *held, *place, side)
-        moving = eliminate(blocks._replace(u=in_point.u + in_u, z=in_point.z))  # -H^-1 dG/dp
-        implied = jax.grad(along, argnums=(2, 3, 4))(at, Point(moving.u, moving.z), *place, side)
-        return tuple(a + b for a, b in zip(direct, implied, strict=True))
+
+        def curved(place: _Place, arrow: Array, s: Array, m: Array) -> _Slope:
+            return _forward(lambda p: _curved(law, p, in_blocks.value, arrow, s, m), place)
+
+        direct = jax.vmap(curved)(runs, _arrow(in_blocks), side, design.mask)
+        du = in_u + in_blocks.value * at.u + direct.x[:, :d].sum(0)
+        dz = in_blocks.value * at.z + direct.x[:, d:]
+        moving = eliminate(blocks._replace(u=du, z=dz))  # -H^-1 dG/dp
+        way = jnp.concatenate([jnp.broadcast_to(moving.u, (at.z.shape[0], d)), moving.z], axis=1)
+
+        def pushed(place: _Place, v: Array, s: Array, m: Array) -> _Slope:
+            def along(p: _Place) -> Array:
+                return jax.jvp(lambda y: _losses(law, p._replace(x=y), s, m), (p.x,), (v,))[1]
+
+            return _forward(along, place)
+
+        implied = jax.vmap(pushed)(runs, way, side, design.mask)
+        return tuple(getattr(direct, k) + getattr(implied, k) for k in ("conditions", "times", "values"))
 
     conditions, times, values = jax.vmap(pull)(point, near, readings.values, readings.side, weight)
     return conditions.sum(0), times.sum(0), values
@@ -160,28 +200,49 @@ def gradient(
     log evidence (study, listed) and in ln variance of asked constants (study, asked) are ``weights``."""
     d_evidence, d_spread = weights  # (study, listed), (study, asked)
     readings = readings_of(bench, design, truths)
-    asked = (ALL,) if bench.precision_by == "D" else tuple(name for name, _ in bench.asked)
     conditions, times = np.zeros_like(design.conditions), np.zeros_like(design.times)
     d_values = np.zeros_like(readings.values)
-    for row, index in enumerate(bench.listed):
-        law, fit = bench.laws[index], scores.fits[row]
-        own = (scores.truth == row)[:, None] * d_spread
-        usable = (fit.pivot > 0) & (fit.trouble == 0) & np.isfinite(fit.log_evidence)
-        active = usable & ((np.abs(d_evidence[:, row]) > NEGLIGIBLE) | (np.abs(own).max(1, initial=0) > 0))
-        rows = np.flatnonzero(active)
-        for begin in range(0, len(rows), LANES):
-            some = np.resize(rows[begin : begin + LANES], LANES)
-            alive = (np.arange(LANES) < len(rows) - begin).astype(float)
-            weight = np.concatenate([d_evidence[some, row, None], own[some]], axis=1) * alive[:, None]
-            at = Point(fit.u[some], fit.z[some])
-            read = Readings(readings.values[some], readings.side[some])
-            near = jax.tree.map(lambda x, some=some: x[some], scores.blocks[row])
-            pulled = _pull_evidence(law, asked, at, near, design, read, weight)
-            conditions += np.asarray(pulled[0])
-            times += np.asarray(pulled[1])
-            d_values[some[alive > 0]] += np.asarray(pulled[2])[alive > 0]
+
+    def pulled(row: int) -> list[tuple[np.ndarray, list[np.ndarray]]]:
+        return _pulls(bench, row, design, readings, scores, d_evidence[:, row], d_spread)
+
+    for parts in side_by_side(pulled, range(len(bench.listed))):
+        for some, part in parts:
+            conditions += part[0]
+            times += part[1]
+            d_values[some] += part[2][: len(some)]
     _through_readings(bench, design, truths, scores, d_values, readings, conditions, times)
     return conditions, times
+
+
+def _pulls(
+    bench: Bench,
+    row: int,
+    design: Design,
+    readings: Readings,
+    scores: Scores,
+    d_evidence: np.ndarray,
+    d_spread: np.ndarray,
+) -> list[tuple[np.ndarray, list[np.ndarray]]]:
+    """What one candidate's terms pull, batch by batch: rows of the batch, then gradients in conditions,
+    times and values. Studies in which they carry no weight, or the fit failed, are left out."""
+    law, fit = bench.laws[bench.listed[row]], scores.fits[row]
+    asked = (ALL,) if bench.precision_by == "D" else tuple(name for name, _ in bench.asked)
+    own = (scores.truth == row)[:, None] * d_spread
+    usable = (fit.pivot > 0) & (fit.trouble == 0) & np.isfinite(fit.log_evidence)
+    active = usable & ((np.abs(d_evidence) > NEGLIGIBLE) | (np.abs(own).max(1, initial=0) > 0))
+    rows = np.flatnonzero(active)
+    found = []
+    for begin in range(0, len(rows), LANES):
+        real = rows[begin : begin + LANES]
+        some = np.resize(real, LANES)
+        alive = (np.arange(LANES) < len(real)).astype(float)
+        weight = np.concatenate([d_evidence[some, None], own[some]], axis=1) * alive[:, None]
+        at, near = Point(fit.u[some], fit.z[some]), jax.tree.map(lambda x, s=some: x[s], scores.blocks[row])
+        read = Readings(readings.values[some], readings.side[some])
+        part = _pull_evidence(law, asked, at, near, design, read, weight)
+        found.append((real, [np.asarray(x) for x in part]))
+    return found
 
 
 def _through_readings(

@@ -16,7 +16,7 @@ from typing import NamedTuple
 import numpy as np
 
 from designer import beliefs, gates, signals
-from designer.arrays import Array, jax, jnp
+from designer.arrays import Array, jax, jnp, side_by_side
 from designer.evidence import Fit, Kernel, Point, Quadratic
 from designer.layout import Layout, layout
 from designer.likelihood import Design, Readings, limits
@@ -183,15 +183,16 @@ def conclude(
     readings = readings_of(bench, design, truths)
     counts = [len(truth.u) for truth in truths]
     truth = np.repeat(np.arange(len(truths)), counts)
-    fits: dict[int, Fit] = {}
-    blocks: list[Quadratic] = []
-    for index in bench.listed:
+
+    def fitted(index: int) -> tuple[Fit, Quadratic | None]:
         start = None if starts is None else starts[index]
         if careful:
-            fits[index] = gates.careful_fit(bench.kernels[index], design, readings, start)
-        else:
-            fits[index], near = bench.kernels[index].fit_and_blocks(design, readings, start)
-            blocks.append(near)
+            return gates.careful_fit(bench.kernels[index], design, readings, start), None
+        return bench.kernels[index].fit_and_blocks(design, readings, start)
+
+    found = side_by_side(fitted, bench.listed)
+    fits = {index: fit for index, (fit, _) in zip(bench.listed, found, strict=True)}
+    blocks = tuple(near for _, near in found if near is not None)
     values = np.full((len(truth), len(bench.laws)), -np.inf)
     for index, fit in fits.items():
         values[:, index] = np.where(fit.trouble > 0, -np.inf, fit.log_evidence)
@@ -201,9 +202,17 @@ def conclude(
     unsolved = np.array([(fits[i].trouble > 0).sum() if i in fits else 0 for i in range(len(bench.laws))])
     spread = _spreads(bench, truth, fits)
     overall = Z95 * _overall_spread(bench, truth, fits)
-    found = tuple(fits.values())
     return Scores(
-        truth, values, Z95 * spread, spread, overall, doubtful, repaired, unsolved, found, tuple(blocks)
+        truth,
+        values,
+        Z95 * spread,
+        spread,
+        overall,
+        doubtful,
+        repaired,
+        unsolved,
+        tuple(fits.values()),
+        blocks,
     )
 
 
@@ -225,14 +234,16 @@ def _assure(
     open_ = near.sum(1) > 1  # where one candidate stands alone, its evidence may be off without harm
     values = values.copy()
     doubtful, repaired = np.zeros(len(values), bool), np.zeros(len(values), int)
-    for index, fit in fits.items():
+
+    def sure(index: int) -> gates.Assured:
         matters = near[:, index] & open_
-        if not matters.any():
-            continue
-        sure = gates.assured(bench.kernels[index], design, readings, matters=matters, fit=fit)
-        values[matters, index] = sure.log_evidence[matters]
-        doubtful |= sure.flagged & matters
-        repaired += sure.repaired & matters
+        return gates.assured(bench.kernels[index], design, readings, matters=matters, fit=fits[index])
+
+    for index, found in zip(fits, side_by_side(sure, fits), strict=True):
+        matters = near[:, index] & open_
+        values[matters, index] = found.log_evidence[matters]
+        doubtful |= found.flagged & matters
+        repaired += found.repaired & matters
     return values, doubtful, repaired
 
 
