@@ -149,6 +149,11 @@ def reading_losses(law: Law, signal: Signal, readings: Readings, mask: Array) ->
     return _slopes(law, signal, readings, mask).loss
 
 
+def mean_weights(law: Law, signal: Signal, readings: Readings, mask: Array) -> Array:
+    """Expected curvature of each reading's loss in its mean (..., time, signal): 1/W for a value."""
+    return _slopes(law, signal, readings, mask).mm_gn
+
+
 def loss(law: Law, signal: Signal, readings: Readings, mask: Array) -> Array:
     """Summed loss of the readings; leading axes of ``signal`` broadcast against ``readings``."""
     return _slopes(law, signal, readings, mask).loss.sum((-3, -2, -1))
