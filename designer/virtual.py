@@ -61,7 +61,7 @@ class Bench:
         return some / some.sum()
 
 
-def ready(study: Study, samples: int | None = None, lanes: int = 256, precision_by: str = "c") -> Bench:
+def ready(study: Study, samples: int | None = None, lanes: int = 128, precision_by: str = "c") -> Bench:
     """Compile a study: laws, kernels, layout, and beliefs after the pilots.
 
     precision_by: what the search counts as precision, "c" (variance of each asked ln-constant) or "D"
@@ -188,7 +188,7 @@ def conclude(
         start = None if starts is None else starts[index]
         if careful:
             return gates.careful_fit(bench.kernels[index], design, readings, start), None
-        return bench.kernels[index].fit_and_blocks(design, readings, start)
+        return bench.kernels[index].fit_and_blocks(design, readings, start, exact=False)
 
     found = side_by_side(fitted, bench.listed)
     fits = {index: fit for index, (fit, _) in zip(bench.listed, found, strict=True)}
