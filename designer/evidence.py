@@ -381,15 +381,14 @@ def _some(tree: Any, rows: np.ndarray) -> Any:
 
 
 def scan_nodes(size: int) -> Array:
-    """Structural coordinates at which a cold fit looks first: 13 for one unknown, 65 for two, then
-    more, spread like the prior out to about 3 standard deviations."""
+    """Structural coordinates at which a cold fit looks first: 13 for one unknown, 128 for two, 256 for
+    more, spread a quarter wider than the prior."""
     if size == 0:
         return jnp.zeros((1, 0))
     if size == 1:
         return jnp.linspace(-3, 3, 13)[:, None]
     from scipy.stats import norm, qmc
 
-    count = 2 ** (5 + min(size, 3))
-    points = qmc.Sobol(size, scramble=False).random(count)[1:]
+    points = qmc.Sobol(size, scramble=False).random(2 ** (5 + min(size, 3)))[1:]
     spread = norm.ppf(points) * 1.25
     return jnp.asarray(np.vstack([np.zeros(size), spread]))

@@ -26,6 +26,7 @@ APART = 2.0  # nats at which a freed condition is said to separate them
 FACTOR, KELVIN = 2.0, 10.0  # by which a fixed condition is freed
 HARD = 10.0  # separation (in squared SD) that makes a pair easy
 TELLING = 1.5  # SD a sample must contribute to be said to separate
+CLEARLY = 0.1  # and the share of its pair's separation, against its share of what is learned of the constant
 
 
 @dataclass(frozen=True)
@@ -183,7 +184,7 @@ def _purpose(
     here = score[:, :, run, time]
     truth, rival, signal = np.unravel_index(here.argmax(), here.shape)
     apart = np.sqrt(gap[truth, rival, run, time, signal])
-    if apart < TELLING or here.max() < 0.5 * on_constant[run, time]:
+    if apart < TELLING or here.max() < CLEARLY * on_constant[run, time]:
         return Purpose(None, int(signal), (np.nan, np.nan))
     trial = trials[truth]
     values = (

@@ -20,8 +20,7 @@ ZERO_CELSIUS = units.ZERO_CELSIUS
 # (up to, step), s: what is written on a bench sheet
 STEPS = (
     (10.0, 0.5),
-    (60.0, 1.0),
-    (120.0, 5.0),
+    (60.0, 5.0),
     (600.0, 30.0),
     (3600.0, 60.0),
     (3 * 3600.0, 300.0),
