@@ -7,7 +7,7 @@ from designer.arrays import Array
 from designer.errors import CallError
 from designer.expressions import Number
 from designer.records import Candidate, Step
-from designer.trajectories import clock, extent, implicit, linear, quadratic, structure
+from designer.trajectories import clock, extent, implicit, linear, power, quadratic, structure
 from designer.trajectories.path import Curve, Path
 from designer.trajectories.polynomial import NotPolynomialError
 
@@ -62,6 +62,9 @@ def _single(candidate: Candidate, single: Step) -> Path | None:
     turning = structure.may_turn(candidate, rest)
     if is_quadratic(candidate, still):
         return quadratic.path(candidate, still, turning, hands)
+    law = power.recognise(still)
+    if law is not None and not turning:
+        return power.path(candidate, still, law, hands)
     signs = {number < 0 for _, number in single.equation.stoichiometry if number}
     if signs != {True, False} if turning else True not in signs:
         return None  # nothing is used up: the extent has no end

@@ -90,12 +90,11 @@ def finished(
     start: Mapping[str, Array],
     factor: Array,
     times: Array,
-    slope: Slope,
     extents: list[Array],
     error: Array,
 ) -> Curve:
     """The curve of these extents; trouble where the error or an amount below 0 is too large to ignore."""
-    now = network.concentrations(start, from_rates(slope, extents, times))
+    now = network.concentrations(start, extents)
     amount = amount_of(start)
     below = jnp.min(jnp.stack([jnp.min(value + 0 * times) for value in now.values()]))
     good = (error < LARGEST_ERROR * amount) & (below > -LARGEST_ERROR * amount)  # false for NaN
@@ -126,8 +125,8 @@ def path(
         def slope(extents: list[Array], time: Array) -> list[Array]:
             return network.slope(values, start, factor, extents, time)
 
-        extents, error = _march(slope, network.size, jax.lax.stop_gradient(times), shares, columns)
-        return finished(network, values, start, factor, times, slope, extents, error)
+        extents, error = _march(slope, network.size, times, shares, columns)
+        return finished(network, values, start, factor, times, extents, error)
 
     return Path("implicit", False, solve, fallback)
 
@@ -227,12 +226,3 @@ def solved(lower: Matrix, upper: Matrix, right: list[Array]) -> list[Array]:
             out[i] = out[i] - upper[i][k] * out[k]
         out[i] = out[i] / upper[i][i]
     return out
-
-
-def from_rates(slope: Slope, extents: list[Array], times: Array) -> list[Array]:
-    """The same values, with their first and second derivatives in time put in from the rates."""
-    held_times = jax.lax.stop_gradient(times)
-    past = times - held_times  # 0, with derivative 1
-    first = slope(extents, held_times)
-    second = jax.jvp(slope, (extents, held_times), (first, jnp.ones_like(times)))[1]
-    return [y + f * past + g * past**2 / 2 for y, f, g in zip(extents, first, second, strict=True)]

@@ -11,6 +11,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable
+from typing import Any
 
 # Solving for tangents raises on what is not finite, whatever ``throw`` says; as NaN it becomes ``trouble``.
 os.environ.setdefault("EQX_ON_ERROR", "nan")
@@ -112,9 +113,9 @@ def path(candidate: Candidate, stiff: bool = True) -> Path:
             return _integrated(scaled, network.size, times, amount_of(start), stiff)
 
         found = both_ways(integrated)(flat, jax.lax.stop_gradient(times))
-        extents = [found[i] for i in range(network.size)]
+        extents = from_rates(slope, [found[i] for i in range(network.size)], times)
         error = jnp.where(jnp.all(jnp.isfinite(found)), 0.0, jnp.inf)
-        return finished(network, values, start, factor, times, slope, extents, error)
+        return finished(network, values, start, factor, times, extents, error)
 
     return Path("integrator", False, solve)
 
@@ -130,7 +131,7 @@ def _integrated(slope: Slope, size: int, times: Array, amount: Array, stiff: boo
         return jnp.stack(moved) * (last / amount)
 
     # ten times the tolerances stall the stepper on stiff problems, a thousand times change no digit
-    chord = optimistix.Chord(rtol=rtol * 300, atol=atol * 300, linear_solver=Unrolled())
+    chord: Any = optimistix.Chord(rtol=rtol * 300, atol=atol * 300, linear_solver=Unrolled())
     solver = diffrax.Kvaerno5(root_finder=chord) if stiff else diffrax.Tsit5()
     found = diffrax.diffeqsolve(
         diffrax.ODETerm(field),
@@ -148,3 +149,12 @@ def _integrated(slope: Slope, size: int, times: Array, amount: Array, stiff: boo
     good = found.result == diffrax.RESULTS.successful
     back = jnp.argsort(order)
     return jnp.where(good, found.ys.T[:, back] * amount, jnp.nan)
+
+
+def from_rates(slope: Slope, extents: list[Array], times: Array) -> list[Array]:
+    """The same values, with their first and second derivatives in time put in from the rates."""
+    held_times = jax.lax.stop_gradient(times)
+    past = times - held_times  # 0, with derivative 1
+    first = slope(extents, held_times)
+    second = jax.jvp(slope, (extents, held_times), (first, jnp.ones_like(times)))[1]
+    return [y + f * past + g * past**2 / 2 for y, f, g in zip(extents, first, second, strict=True)]

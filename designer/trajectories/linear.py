@@ -24,9 +24,9 @@ from designer.records import Candidate, Step
 from designer.trajectories import structure
 from designer.trajectories.path import RATE_FUNCTIONS, Curve, Path, filled, held, power, rates_along
 
-SQUARINGS = 30
-TERMS = 10
-LARGEST = 0.5  # of q h: beyond it the series of TERMS terms is no longer exact
+SQUARINGS = 32
+TERMS = 8
+LARGEST = 0.1  # of q h: beyond it the series of TERMS terms is no longer exact
 PASSES = 100
 
 Entries = tuple[tuple[Array | None, ...], ...]  # None: no way from the column's species to the row's
