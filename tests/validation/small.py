@@ -8,6 +8,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from functools import cache
 from math import log
+from typing import Any
 
 import numpy as np
 from scipy.optimize import brentq
@@ -104,7 +105,7 @@ class Reaction:
     def __init__(self, *pairs: tuple[str, str]) -> None:
         self.steps = steps(*pairs)
         self.candidate = Candidate("reaction", 1.0, self.steps, ())
-        self._solve = None
+        self._solve: Any = None
 
     def _curve(
         self, start: Mapping[str, float], bare: Mapping[str, float], times: np.ndarray
