@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from math import log
+from math import floor, log
 
 import numpy as np
 
@@ -73,8 +73,7 @@ def allowed(study: Study) -> Allowed:
     """
     levers = []
     for index, condition in enumerate(study.conditions):
-        low, high = _bounds(study, condition)
-        levels = tuple(level for level in condition.levels if low <= level <= high * (1 + CLOSE))
+        low, high, levels = _bounds(study, condition)
         if low < high:
             levers.append(Lever(index, condition.name, low, high, levels))
     limits, plan = study.limits, study.plan
@@ -92,7 +91,8 @@ def allowed(study: Study) -> Allowed:
     return found
 
 
-def _bounds(study: Study, condition: Condition) -> tuple[float, float]:
+def _bounds(study: Study, condition: Condition) -> tuple[float, float, tuple[float, ...]]:
+    """Least and most of a condition, and the levels left between them (none where it is a range)."""
     low, high = condition.low, min(condition.high, dict(study.caps).get(condition.name, np.inf))
     stock = dict(study.stocks).get(condition.name)
     smallest, volume = study.vessel.smallest_pipetted, study.vessel.volume
@@ -100,29 +100,56 @@ def _bounds(study: Study, condition: Condition) -> tuple[float, float]:
         high = min(high, stock)
         if smallest is not None and volume is not None:
             low = max(low, stock * smallest / volume)
-    if low > high * (1 + CLOSE):
+    levels = tuple(level for level in condition.levels if low * (1 - CLOSE) <= level <= high * (1 + CLOSE))
+    if low > high * (1 + CLOSE) or (condition.levels and not levels):
         raise InfeasibleError(
             f"no {condition.name} can be chosen: the least is {low:g} and the most {high:g} (internal units) "
             "once caps, stocks and the smallest volume that can be pipetted are counted; "
             "raise the cap or use a weaker stock"
         )
-    return low, high
+    return (levels[0], levels[-1], levels) if levels else (low, max(low, high), ())
 
 
 def _check(offer: Allowed) -> None:
+    _check_vessel(offer)
     taken = offer.samples - offer.at_start
-    needed = offer.first + (taken - 1) * offer.spacing
-    if taken > 0 and needed > offer.longest * (1 + CLOSE):
+    needed = offer.first + (taken - 1) * offer.spacing if taken > 0 else 0.0
+    if needed > offer.longest * (1 + CLOSE):
         raise InfeasibleError(
             f"{offer.samples} samples {offer.spacing:g} s apart from {offer.first:g} s take {needed:g} s, "
-            f"longer than the longest run of {offer.longest:g} s; take fewer samples or allow a longer run"
+            f"longer than the longest run of {offer.longest:g} s; {_fewer(offer)}"
         )
     booked, setup = offer.study.limits.booked, offer.study.limits.setup_per_run
-    if booked is not None and offer.runs * (setup + max(needed, offer.first)) > booked * (1 + CLOSE):
+    if booked is not None and offer.runs * (setup + needed) > booked * (1 + CLOSE):
+        fit = floor(booked / (setup + needed) + CLOSE)
         raise InfeasibleError(
             f"{offer.runs} runs need at least {offer.runs * (setup + needed) / 3600:.3g} h and "
-            f"{booked / 3600:.3g} h are booked; plan fewer runs or book longer"
+            f"{booked / 3600:.3g} h are booked; book that much longer"
+            + (f" or plan at most {fit} run{'s' if fit > 1 else ''}" if fit else "")
         )
+
+
+def _fewer(offer: Allowed) -> str:
+    """The least change that makes room for the samples of a run."""
+    if offer.first > offer.longest:
+        return f"allow a run of {offer.first:g} s or sample earlier"
+    fit = floor((offer.longest - offer.first) / offer.spacing + CLOSE) + 1 + offer.at_start
+    return f"take at most {fit} samples or allow the longer run"
+
+
+def _check_vessel(offer: Allowed) -> None:
+    least = sum(_bounds(offer.study, condition)[0] / stock for condition, stock in _from_stocks(offer.study))
+    if least > 1 + CLOSE:
+        raise InfeasibleError(
+            f"the least amounts from the stocks together fill {least:.3g} times the vessel; "
+            "use a stronger stock or allow lower amounts"
+        )
+
+
+def _from_stocks(study: Study) -> list[tuple[Condition, float]]:
+    """Conditions that are drawn from a stock, with its strength."""
+    stocks = dict(study.stocks)
+    return [(condition, stocks[condition.name]) for condition in study.conditions if condition.name in stocks]
 
 
 def fit_times(offer: Allowed, times: np.ndarray) -> np.ndarray:
@@ -157,22 +184,41 @@ def _fit_run(offer: Allowed, times: np.ndarray) -> np.ndarray:
 
 
 def fit_conditions(offer: Allowed, conditions: np.ndarray) -> np.ndarray:
-    """Nearest conditions (run, condition) on the levers; fixed ones are set to their value. Where the
-    stocks together would overfill the vessel, the amounts that come from stocks shrink together."""
+    """Nearest conditions (run, condition) on the levers; the others are set to their value. Where the
+    stocks together would overfill the vessel, the amounts that come from stocks shrink together, each
+    towards the least that is allowed of it."""
     fitted = np.array(conditions, float)
     for index, condition in enumerate(offer.study.conditions):
-        if condition.is_fixed:
-            fitted[:, index] = condition.low
+        low, high, _ = _bounds(offer.study, condition)
+        fitted[:, index] = np.clip(fitted[:, index], low, high)
     for lever in offer.levers:
         fitted[:, lever.index] = lever.nearest(fitted[:, lever.index])
+    if offer.study.stocks:
+        for row in fitted:
+            _fit_vessel(offer, row)
+    return fitted
+
+
+def _fit_vessel(offer: Allowed, row: np.ndarray) -> None:
+    """Shrink what a run draws from its stocks until the vessel holds it; levels step down first."""
     stocks = dict(offer.study.stocks)
     drawn = [lever for lever in offer.levers if lever.name in stocks and not lever.levels]
-    if drawn:
-        share = np.sum([fitted[:, lever.index] / stocks[lever.name] for lever in drawn], axis=0)
-        over = np.maximum(share, 1.0)
-        for lever in drawn:
-            fitted[:, lever.index] = np.maximum(fitted[:, lever.index] / over, lever.low)
-    return fitted
+    stepped = [lever for lever in offer.levers if lever.name in stocks and lever.levels]
+    ranged = [lever.index for lever in drawn]
+    strength = np.array([stocks[lever.name] for lever in drawn])
+    least = np.array([lever.low for lever in drawn]) / strength
+    places = {condition.name: i for i, condition in enumerate(offer.study.conditions)}
+    while True:
+        parts = {name: row[places[name]] / stock for name, stock in stocks.items() if name in places}
+        room = 1 - sum(part for name, part in parts.items() if places[name] not in ranged) - least.sum()
+        lower = [lever for lever in stepped if row[lever.index] > lever.levels[0]]
+        if room >= -CLOSE or not lower:
+            break
+        greatest = max(lower, key=lambda lever: parts[lever.name])
+        row[greatest.index] = max(x for x in greatest.levels if x < row[greatest.index])
+    above = row[ranged] / strength - least
+    if above.sum() > max(room, 0.0):
+        row[ranged] = (least + above * max(room, 0.0) / above.sum()) * strength
 
 
 def total_time(study: Study, schedule: Schedule) -> float:
@@ -186,10 +232,10 @@ def broken_limits(study: Study, schedule: Schedule) -> tuple[str, ...]:
     for number, run in enumerate(schedule.runs, 1):
         found += [f"run {number}: {text}" for text in _broken_by_run(study, run.times, run.end)]
         for name, value in run.conditions:
-            condition = study.condition(name)
-            low, high = condition.low, min(condition.high, dict(study.caps).get(name, np.inf))
-            if value > high * (1 + CLOSE) or value < low * (1 - CLOSE):
-                found.append(f"run {number}: {name} is outside what is on offer")
+            if text := _broken_by_value(study, study.condition(name), value):
+                found.append(f"run {number}: {name} {text}")
+        if sum(dict(run.conditions)[c.name] / stock for c, stock in _from_stocks(study)) > 1 + CLOSE:
+            found.append(f"run {number}: needs more from the stocks than the vessel holds")
     count = sum(len(run.times) for run in schedule.runs)
     if limits.runs is not None and len(schedule.runs) > limits.runs:
         found.append(f"{len(schedule.runs)} runs, more than the limit of {limits.runs}")
@@ -198,6 +244,19 @@ def broken_limits(study: Study, schedule: Schedule) -> tuple[str, ...]:
     if limits.booked is not None and total_time(study, schedule) > limits.booked * (1 + CLOSE):
         found.append("takes longer than the time booked")
     return tuple(found)
+
+
+def _broken_by_value(study: Study, condition: Condition, value: float) -> str:
+    low, high = condition.low, min(condition.high, dict(study.caps).get(condition.name, np.inf))
+    if value > high * (1 + CLOSE) or value < low * (1 - CLOSE):
+        return "is outside what is on offer"
+    if condition.levels and not np.isclose(value, condition.levels, rtol=CLOSE, atol=0).any():
+        return "is none of the levels on offer"
+    smallest, volume = study.vessel.smallest_pipetted, study.vessel.volume
+    stock = dict(study.stocks).get(condition.name)
+    if stock is None or smallest is None or volume is None or value == 0:
+        return ""
+    return "needs less than can be pipetted" if value < stock * smallest / volume * (1 - CLOSE) else ""
 
 
 def _broken_by_run(study: Study, times: tuple[float, ...], end: float) -> list[str]:

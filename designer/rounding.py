@@ -12,7 +12,7 @@ from math import ceil, floor, log10
 import numpy as np
 
 from designer import units
-from designer.allowed import CLOSE, Allowed
+from designer.allowed import CLOSE, Allowed, fit_times
 from designer.records import Study
 from designer.search import Proposal
 
@@ -90,9 +90,10 @@ def _not_overfull(offer: Allowed, conditions: np.ndarray, sizes: dict[str, float
     """Step amounts drawn from stocks down until they fit the vessel together."""
     stocks = dict(offer.study.stocks)
     drawn = [lever for lever in offer.levers if lever.name in stocks and not lever.levels]
+    every = [(i, stocks[c.name]) for i, c in enumerate(offer.study.conditions) if c.name in stocks]
     for row in conditions:
         for _ in range(100):
-            if sum(row[lever.index] / stocks[lever.name] for lever in drawn) <= 1 + CLOSE:
+            if sum(row[index] / stock for index, stock in every) <= 1 + CLOSE:
                 break
             for lever in drawn:
                 less = max(row[lever.index] * 0.98, lever.low)
@@ -131,10 +132,10 @@ def _within_booking(offer: Allowed, times: np.ndarray) -> np.ndarray:
         if over <= CLOSE * booked:
             return times
         gaps = times[:, -1] - np.maximum(
-            times[:, -2] + offer.spacing if times.shape[1] > 1 else offer.first, 0
+            times[:, -2] + offer.spacing if times.shape[1] > 1 else 0.0, offer.first
         )
         run = int(gaps.argmax())
         if gaps[run] <= 0:
             break
         times[run, -1] -= min(time_step(times[run, -1]), gaps[run])
-    return times
+    return fit_times(offer, times)  # no room to the last sample: all of them move, whatever is written
