@@ -20,6 +20,7 @@ from designer.likelihood import Design
 from designer.virtual import Bench, Truth
 
 RATE_LEVER, RATE_TIME = 0.06, 0.12  # first steps of the ascent: of a lever's way, and in ln t
+BEGINNINGS = (0.0, 0.1, 0.3)  # of the run: where the first sample of a coarse proposal lies
 MEMORY_FIRST, MEMORY_SECOND = 0.8, 0.95  # of the running means of gradient and square
 
 
@@ -237,7 +238,9 @@ def run_lengths(bench: Bench, offer: Allowed) -> np.ndarray:
 
 def coarse_proposals(bench: Bench, offer: Allowed, count: int, seed: int) -> list[Proposal]:
     """The usual schedules, then ``count`` designs with levers at low, middle or high and times spread
-    equally or logarithmically over half, one or two times what 90 % conversion takes."""
+    equally or logarithmically over half, one or two times what 90 % conversion takes, from the first
+    possible sample or a late one: an early sample that tells little often lies in a hollow of its own,
+    out of which no small step leads."""
     random = np.random.default_rng([seed, 7])
     lengths = run_lengths(bench, offer)
     found = [Proposal(c, t, lengths) for _, c, t in usual.usual_schedules(bench, offer)]
@@ -254,7 +257,8 @@ def coarse_proposals(bench: Bench, offer: Allowed, count: int, seed: int) -> lis
             if key not in known:
                 known[key] = usual.conversion_time(bench, row, offer)
             end = min(known[key] * random.choice([0.5, 1.0, 2.0]), offer.longest)
-            rows.append(usual.spaced(offer, end, bool(random.random() < 0.6)))
+            begin = end * random.choice(BEGINNINGS)
+            rows.append(usual.spaced(offer, end, bool(random.random() < 0.6), begin))
         found.append(Proposal(conditions, fit_times(offer, np.stack(rows)), lengths))
     return found
 

@@ -63,10 +63,10 @@ def _weighted_median(values: np.ndarray, weight: np.ndarray) -> np.ndarray:
     return values[order[place, columns], columns]
 
 
-def spaced(offer: Allowed, end: float, logarithmic: bool) -> np.ndarray:
-    """Times of one run from the first sample to ``end``, (sample,)."""
+def spaced(offer: Allowed, end: float, logarithmic: bool, begin: float = 0.0) -> np.ndarray:
+    """Times of one run from ``begin`` (the first sample, unless that comes later) to ``end``, (sample,)."""
     taken = offer.samples - offer.at_start
-    first = offer.first if offer.first > 0 or not logarithmic else end / 100
+    first = max(offer.first, begin) if offer.first + begin > 0 or not logarithmic else end / 100
     end = max(end, first * (1 + 1e-9) + 1e-9)
     row = np.geomspace(max(first, end * 1e-6), end, taken) if logarithmic else np.linspace(first, end, taken)
     return np.concatenate([np.zeros(int(offer.at_start)), row])
