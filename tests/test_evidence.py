@@ -354,6 +354,20 @@ def test_approach_to_an_unknown_plateau() -> None:
     as_expected(found, [case["expected"][f"log_evidence_order{n}"] for n in (1, 2)])
 
 
+def test_intermediate_of_two_steps() -> None:
+    """G4-08: A -> B -> C read in B; the rival, a reversible first step, is out of the running."""
+    case = decay.CASES["G4-08"]
+    first, second = decay.lognormal("k1", 0.6, 0.5), decay.lognormal("k2", 0.25, 0.5)
+    steps = (
+        decay.step("k1*[A]", ("A", -1.0), ("B", 1.0)),
+        decay.step("k2*[B]", ("B", -1.0), ("C", 1.0)),
+    )
+    consecutive = Candidate("consecutive", 0.5, steps, (first, second))
+    study = decay.study((consecutive,), 0.02, signal="[B]")
+    found = conclude(study, *decay.arrays(*decay.data("syn_consecutive6.csv")))
+    as_expected(found, [case["expected"]["log_evidence_consecutive"]])
+
+
 # ---- what must not change the answer
 
 
