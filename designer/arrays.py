@@ -30,7 +30,7 @@ FUNCTIONS = {"exp": jnp.exp, "log": jnp.log, "sqrt": jnp.sqrt}
 def keep_compiled(folder: Path) -> None:
     """Keep compiled kernels in ``folder`` between commands (compilation is the cold start)."""
     jax.config.update("jax_compilation_cache_dir", str(folder))
-    jax.config.update("jax_persistent_cache_min_compile_time_secs", 0.3)
+    jax.config.update("jax_persistent_cache_min_compile_time_secs", 0.0)
     jax.config.update("jax_persistent_cache_min_entry_size_bytes", 0)
 
 

@@ -29,7 +29,7 @@ from designer.signals import Law, Signal
 
 LONGEST_STEP = 1.5  # in structural coordinates, so in prior standard deviations
 LEAST_PIVOT = 1e-6  # of H, below which it is not taken for positive
-CONVERGED = 1e-6  # decrement at which a fit stops
+CONVERGED = 1e-5  # decrement at which a fit stops
 STEPS = 6  # of a batch, after which those that need more are gathered
 MOST_ROUNDS = 6
 LANES = 256  # data sets a compiled batch holds
@@ -246,24 +246,23 @@ def _laplace(state: State, exact: Quadratic, safe: Quadratic, free: Array) -> Fi
 
 def _exactly(law: Law, state: State, design: Design, readings: Readings, free: Array) -> Fit:
     """Laplace with the Hessian from differences of the gradient (laws without cheap second derivatives)."""
-    exact = jax.vmap(partial(hessian_by_differences, law), in_axes=(0, None, 0))(state.best, design, readings)
+    differences = jax.vmap(partial(hessian_by_differences, law), in_axes=(0, 0, None, 0))
+    exact = differences(state.best, state.near, design, readings)
     return jax.vmap(_laplace)(state, exact, state.near, free)
 
 
-def hessian_by_differences(law: Law, point: Point, design: Design, readings: Readings) -> Quadratic:
-    """F with its Hessian from central differences of the gradient (laws without cheap second derivatives)."""
+def hessian_by_differences(
+    law: Law, point: Point, base: Quadratic, design: Design, readings: Readings
+) -> Quadratic:
+    """``base`` (F at ``point``) with its Hessian from central differences of the gradient, for laws without
+    cheap second derivatives."""
     structural, size = len(law.structural), len(law.structural) + point.z.shape[1]
-    base = quadratic(law, point, design, readings, False)[0]
-
-    def gradient(x: Array, run: Design, read: Readings) -> Array:
-        return run_terms(law, x, run, read, False).gradient
+    moves = DIFFERENCE * jnp.concatenate([jnp.eye(size), -jnp.eye(size)])
 
     def one(z: Array, run: Design, read: Readings) -> Array:
         x = jnp.concatenate([point.u, z])
-        move = DIFFERENCE * jnp.eye(size)
-        up = jax.vmap(lambda m: gradient(x + m, run, read))(move)
-        down = jax.vmap(lambda m: gradient(x - m, run, read))(move)
-        h = (up - down) / (2 * DIFFERENCE)
+        slopes = jax.vmap(lambda m: run_terms(law, x + m, run, read, False).gradient)(moves)
+        h = (slopes[:size] - slopes[size:]) / (2 * DIFFERENCE)
         return (h + h.T) / 2
 
     h = jax.vmap(one)(point.z, design, readings)
