@@ -5,7 +5,8 @@ Gate N  a fit that did not converge, or ended where H is not positive, is begun 
 Gate S  a glance along the worst-determined structural coordinate (``repair.glance``) that differs
         from Laplace calls for the full quadrature.
 Gate R  a line through each run's coordinates (``repair.of_runs``): what it adds is added, and where that
-        is much the value is flagged. It answers for readings cut off at a limit.
+        is much, or another line would add more, the value is flagged. It answers for readings cut
+        off at a limit, and for reactions that stop abruptly.
 
 What is left doubtful is flagged with an error, never silent.
 """
@@ -24,6 +25,7 @@ NOT_CONVERGED = 1e-3  # decrement above which gate N fires
 GLANCE = 0.02  # nats by which a glance may differ from Laplace
 DOUBTFUL = 0.05  # error above which a value is flagged
 STARTS = 5
+MOST_ADDED = 0.5  # nats by gate R for one run; more comes from a kink, not from a bend, and is not believed
 LINE_ERROR = 0.1  # of what gate R adds: trials against brute force left 0.03 to 0.1 of it
 
 
@@ -100,8 +102,9 @@ def assured(
         value[doubtful], error[doubtful] = full.log_evidence, full.error
         repaired[doubtful] = True
     added = repair.of_runs(kernel, design, some, at)
-    value[rows] += added.value.sum(1)
-    error[rows] += (LINE_ERROR * np.abs(added.value) + added.ends).sum(1)
+    sober = np.abs(added.value) < MOST_ADDED
+    value[rows] += (added.value * sober).sum(1)
+    error[rows] += (np.abs(added.value) * np.where(sober, LINE_ERROR, 1.0) + added.doubt).sum(1)
     error = np.where(np.isfinite(value), error, np.inf)
     return Assured(value, error, repaired, error > DOUBTFUL, fit)
 

@@ -29,6 +29,7 @@ NODES = 25
 DEPTH = 14.0  # nats below the top at which the density is left out
 INNER_NODES = 5
 LINE = np.linspace(-7, 7, 29)  # in Laplace standard deviations of a run
+OTHERS = 6  # readings of a run whose lines are looked at besides
 NEARBY = 0.01  # of those, over which the curvature at the optimum is differenced
 NORMAL = -np.log(2 * np.pi) / 2  # of the prior in a held coordinate; in Laplace it cancels with det H
 
@@ -168,10 +169,10 @@ def _inner(
 
 
 class Added(NamedTuple):
-    """What a line through each run adds to ln Z (draw, run), and the share of the density at its ends."""
+    """What a line through each run adds to ln Z (draw, run), and how far other lines disagree (draw, run)."""
 
     value: np.ndarray
-    ends: np.ndarray
+    doubt: np.ndarray
 
 
 def of_runs(kernel: Kernel, design: Design, readings: Readings, fit: Fit) -> Added:
@@ -180,7 +181,9 @@ def of_runs(kernel: Kernel, design: Design, readings: Readings, fit: Fit) -> Add
     With G the loss of a run and its prior at fixed structural coordinates, and d a direction in the run's
     coordinates: ln of the integral of exp(G(z*) - G(z* + t d)) over t, less the same for the parabola
     at z*. Two directions are tried, that of the best-measured reading and that of the censored ones, each
-    with the rest of the run's coordinates following; the larger result counts.
+    with the rest of the run's coordinates following; the larger result counts. Lines along a few other
+    readings that would add more (a reaction that stops abruptly between two readings), and density left at
+    the end of a line, are doubts.
     """
     count, law = len(fit.u), kernel.law
     found = Added(np.zeros((count, len(design.times))), np.zeros((count, len(design.times))))
@@ -189,8 +192,8 @@ def of_runs(kernel: Kernel, design: Design, readings: Readings, fit: Fit) -> Add
     for begin in range(0, count, kernel.lanes):
         rows = np.minimum(np.arange(begin, begin + kernel.lanes), count - 1)
         some = Readings(*(np.asarray(x)[rows] for x in readings))
-        value, ends = _of_runs(law, design, some, Point(fit.u[rows], fit.z[rows]))
-        found.value[rows], found.ends[rows] = np.asarray(value), np.asarray(ends)
+        value, doubt = _of_runs(law, design, some, Point(fit.u[rows], fit.z[rows]))
+        found.value[rows], found.doubt[rows] = np.asarray(value), np.asarray(doubt)
     return found
 
 
@@ -218,11 +221,13 @@ def _of_one_run(law: Law, u: Array, z: Array, run: Design, readings: Readings) -
         return jnp.where(known, value, 0.0), jnp.where(known, jnp.exp(-jnp.minimum(rise[0], rise[-1])), 0.0)
 
     value, ends = jax.vmap(line)(_directions(law, u, z, run, readings))
-    return value[jnp.argmax(jnp.abs(value))], ends.max()
+    added = value[jnp.argmax(jnp.abs(value[:2]))]
+    return added, jnp.maximum(jnp.abs(value).max() - jnp.abs(added), 0.0) + ends.max()
 
 
 def _directions(law: Law, u: Array, z: Array, run: Design, readings: Readings) -> Array:
-    """Directions (2, error) in a run's coordinates, of unit length in Gauss-Newton's standard deviations."""
+    """Directions (direction, error) in a run's coordinates, of unit length in Gauss-Newton's standard
+    deviations: of the best-measured reading, of the censored ones, of some spread over the run."""
     size = len(z)
     read = lambda at: law.read(u, at, run.conditions, run.times)  # noqa: E731
     signal, slopes = jax.vmap(lambda v: jax.jvp(read, (z,), (v,)), out_axes=(None, 0))(jnp.eye(size))
@@ -234,8 +239,10 @@ def _directions(law: Law, u: Array, z: Array, run: Design, readings: Readings) -
     white = jnp.stack(arrays.forward(lower, [rows[:, i] for i in range(size)]), axis=-1)
     unit = white / _length(white)[:, None]
     cut = (readings.side.reshape(-1)[:, None] * unit).sum(0)
-    both = jnp.stack([unit[jnp.argmax(_length(white))], cut / _length(cut)])
-    return jnp.stack(arrays.backward(lower, [both[:, i] for i in range(size)]), axis=-1)
+    spread = np.unique(np.linspace(0, unit.shape[0] - 1, OTHERS).round().astype(int))
+    best = unit[jnp.argmax(_length(white))]
+    several = jnp.concatenate([jnp.stack([best, cut / _length(cut)]), unit[spread]])
+    return jnp.stack(arrays.backward(lower, [several[:, i] for i in range(size)]), axis=-1)
 
 
 def _length(vector: Array) -> Array:
