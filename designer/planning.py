@@ -27,6 +27,7 @@ from designer.virtual import Bench
 Progress = Callable[[str, int, int], None]
 
 STUDIES = 400  # virtual studies of each listed candidate behind every figure of the plan
+DEAR_STUDIES = 100  # the same where a look at a plan is dear (``search.is_dear``)
 USUAL_STUDIES = 128  # the same for the schedules it is compared with
 
 
@@ -37,7 +38,7 @@ def plan(
     precision_by: str | None = None,
     compare: Sequence[Schedule] = (),
     effort: Effort | None = None,
-    studies: int = STUDIES,
+    studies: int | None = None,
     progress: Progress | None = None,
 ) -> Plan:
     """Choose the runs and samples of ``study.plan`` and say what they will do.
@@ -45,7 +46,8 @@ def plan(
     seed: the same seed on the same machine and versions gives the same plan. weight_on_law (0 to 1)
     overrides ``[aim]``. precision_by: "D" (all constants) or "c" (the asked ones, the default).
     compare: other schedules to rate beside it. studies: virtual studies of each candidate behind
-    every figure. progress(stage, done, total) is called now and then.
+    every figure (400, or 100 where laws are dear to fit). progress(stage, done, total) is called now
+    and then.
 
     Raises InfeasibleError where the limits leave no plan, CallError for a weight outside 0..1.
     """
@@ -55,6 +57,9 @@ def plan(
     offer = allowed(study)
     most = max([study.plan.samples, *(len(run.times) for other in compare for run in other.runs)])
     bench = virtual.ready(study, most, precision_by=precision_by or "c")
+    if search.is_dear(bench):
+        effort, studies = effort.for_dear_laws(), studies or DEAR_STUDIES
+    studies = studies or STUDIES
     found = search.best_plan(bench, offer, seed, effort, advance=tell)
     written = rounded(offer, found.proposal)
     hill = Hill(bench, offer, effort.studies, seed, "search")

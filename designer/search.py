@@ -35,6 +35,10 @@ class Effort:
     long_steps: int = 24
     sweeps: int = 3
 
+    def for_dear_laws(self) -> Effort:
+        """Less of everything, where a look at a plan takes seconds rather than hundredths."""
+        return Effort(min(self.studies, 96), min(self.looks, 16), 1, 0, 0, min(self.sweeps, 2))
+
     @staticmethod
     def small() -> Effort:
         """The setting of the continuous tests."""
@@ -85,6 +89,11 @@ def design_of(bench: Bench, proposal: Proposal) -> Design:
     )
 
 
+def is_dear(bench: Bench) -> bool:
+    """Whether looks are dear: a listed law without cheap second derivatives, or continuous records."""
+    return len(bench.axes.grid) > 0 or not all(bench.laws[i].second_order for i in bench.listed)
+
+
 class Hill:
     """The worth of proposals over one fixed set of virtual studies."""
 
@@ -93,7 +102,7 @@ class Hill:
         self.count = max(studies // len(bench.listed), 8)
         self.seed, self.purpose = seed, purpose
         self.truths: list[Truth] | None = None
-        self.gradient_works = all(bench.laws[i].second_order for i in bench.listed)
+        self.gradient_works = not is_dear(bench)
 
     def look(self, proposal: Proposal, points: list[Point | None] | None = None) -> Found:
         return self._look(proposal, points)[0]
@@ -281,7 +290,7 @@ def best_plan(
         tell("looking at many plans", number, len(proposals))
     looked.sort(key=lambda found: -found.worth)
     chosen = looked[: effort.starts]
-    refine = _climbing if hill.gradient_works and not len(bench.axes.grid) else _sweeping
+    refine = _climbing if hill.gradient_works else _sweeping
     return refine(hill, chosen, effort, tell)
 
 
