@@ -25,6 +25,7 @@ SAME = 0.1  # nats left after the rival's best refit, below which two candidates
 APART = 2.0  # nats at which a freed condition is said to separate them
 FACTOR, KELVIN = 2.0, 10.0  # by which a fixed condition is freed
 HARD = 10.0  # separation (in squared SD) that makes a pair easy
+HOPELESS = 30.0  # nats left after the refit, beyond which a rival's refit means nothing
 TELLING = 1.5  # SD a sample must contribute to be said to separate
 CLEARLY = 0.1  # and the share of its pair's separation, against its share of what is learned of the constant
 
