@@ -182,7 +182,7 @@ def sweep(hill: Hill, start: Found, size: float, advance: Callable[[], None] | N
     ways by ``size`` (of a lever's way; in ln t); keep what improves."""
     best = start
     for run in range(len(start.proposal.conditions)):
-        for trial in _neighbours(hill.offer, best.proposal, run, size):
+        for trial in _neighbours(hill, best.proposal, run, size):
             found = hill.look(trial(best.proposal), best.points)
             if found.worth > best.worth:
                 best = found
@@ -192,15 +192,16 @@ def sweep(hill: Hill, start: Found, size: float, advance: Callable[[], None] | N
 
 
 def _neighbours(
-    offer: Allowed, proposal: Proposal, run: int, size: float
+    hill: Hill, proposal: Proposal, run: int, size: float
 ) -> list[Callable[[Proposal], Proposal]]:
+    offer = hill.offer
     moves: list[Callable[[Proposal], Proposal]] = []
     for lever in offer.levers:
         if lever.levels:
             moves += [_set_level(offer, run, lever.index, level) for level in lever.levels]
         else:
             moves += [_shift(offer, run, lever, way * size) for way in (1, -1)]
-    count = 0 if len(proposal.times) == 0 else proposal.times.shape[1]
+    count = proposal.times.shape[1] if hill.bench.axes.samples else 0  # none in a run that is recorded
     for column in range(count):
         moves += [_stretch(offer, run, [column], way * size) for way in (1, -1)]
     if count > 1:
