@@ -363,11 +363,13 @@ class Kernel:
         self, function: Callable, state: State, design: Design, readings: Readings, free: np.ndarray
     ) -> Any:
         count = len(free)
-        parts = []
-        for rows in self._lanes(count):
-            parts.append(function(_some(state, rows), design, _some(readings, rows), free[rows]))
-        joined = jax.tree.map(lambda *x: np.concatenate([np.asarray(y) for y in x])[:count], *parts)
-        return joined
+
+        def batch(rows: np.ndarray) -> Any:
+            done = function(_some(state, rows), design, _some(readings, rows), free[rows])
+            return jax.tree.map(np.asarray, done)
+
+        parts = arrays.side_by_side(batch, self._lanes(count))
+        return jax.tree.map(lambda *x: np.concatenate(x)[:count], *parts)
 
     def _lanes(self, count: int) -> list[np.ndarray]:
         """Rows of each padded batch; the last one repeats the last data set."""
