@@ -258,6 +258,7 @@ def plan(
         from designer.loading import load_study
 
         loaded = load_study(study)
+        planfiles.ready(studyfile.locate(study).parent)
         others = [planfiles.read_schedule(file, loaded) for file in compare or ()]
         show = bar()
         keep_compiled()

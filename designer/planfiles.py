@@ -8,9 +8,11 @@ same table describes any other plan that is to be compared; see ``read_schedule`
 from __future__ import annotations
 
 import csv
+import errno
 import io
 import json
 import math
+import os
 import shutil
 import tempfile
 from pathlib import Path
@@ -24,6 +26,15 @@ from designer.records import Schedule, Study
 FOLDER = "plans"
 END = planrows.END
 LARGEST = 1_000_000  # bytes of a plan CSV; a plan is a page
+
+
+def ready(folder: Path) -> None:
+    """Raise OSError where no plan could be written below ``folder``: said before the search, not after."""
+    home = folder / FOLDER
+    if home.exists() and not home.is_dir():
+        raise NotADirectoryError(errno.ENOTDIR, os.strerror(errno.ENOTDIR), str(home))
+    if not os.access(home if home.is_dir() else folder, os.W_OK):
+        raise PermissionError(errno.EACCES, "no plan can be written into this folder", str(home))
 
 
 def write(folder: Path, study: Study, plan: Plan, sheet: str, figure: bytes) -> Path:

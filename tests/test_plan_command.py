@@ -4,6 +4,7 @@ made by hand; the marked test below runs the real one."""
 from __future__ import annotations
 
 import json
+import os
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -119,3 +120,19 @@ def test_the_same_seed_gives_the_same_bytes(folder: Path) -> None:
     for name in ("plan.csv", "plan.json", "plan.png", "run-sheet.txt"):
         first, second = ((folder / "plans" / number / name).read_bytes() for number in ("001", "002"))
         assert first == second
+
+
+def test_a_folder_that_takes_no_plan_is_named_before_the_search(called: Called, folder: Path) -> None:
+    (folder / "plans").write_text("a file")
+    result = run(folder)
+    assert (result.exit_code, result.stdout, called.with_) == (2, "", [])
+    assert result.stderr == f"aliquot: {folder / 'plans'}: not a directory\n"
+
+
+def test_a_folder_without_permission_is_named_before_the_search(
+    called: Called, folder: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(os, "access", lambda path, mode: mode != os.W_OK)  # root may write everywhere
+    result = run(folder)
+    assert (result.exit_code, result.stdout, called.with_) == (2, "", [])
+    assert result.stderr == f"aliquot: {folder / 'plans'}: no plan can be written into this folder\n"
