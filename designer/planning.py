@@ -49,8 +49,11 @@ def plan(
     every figure (400, or 100 where laws are dear to fit). progress(stage, done, total) is called now
     and then.
 
-    Raises InfeasibleError where the limits leave no plan, CallError for a weight outside 0..1.
+    Raises InfeasibleError where the limits leave no plan, CallError for a weight outside 0..1 or a
+    seed below 0.
     """
+    if seed < 0:
+        raise CallError(f"the seed is a whole number from 0; {seed} is not")
     study = _aimed(study, weight_on_law)
     effort = effort or Effort()
     tell = progress or (lambda stage, done, total: None)

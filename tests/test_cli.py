@@ -229,3 +229,10 @@ def test_a_cache_that_cannot_be_written_is_no_trouble(tmp_path: Path) -> None:
         [sys.executable, "-c", code], capture_output=True, text=True, timeout=120, env=environment, check=True
     )
     assert (run.stdout, run.stderr) == ("on\n", "")
+
+
+def test_a_seed_below_zero(capsys, monkeypatch, tmp_path) -> None:  # type: ignore[no-untyped-def]
+    home = small.folder(tmp_path / "mine")
+    status, out, err = aliquot(capsys, monkeypatch, "plan", home, "--seed", "-1")
+    assert (status, out, err) == (2, "", "aliquot: the seed is a whole number from 0; -1 is not\n")
+    assert sorted(path.name for path in home.iterdir()) == [FILE_NAME]
