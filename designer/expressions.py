@@ -12,13 +12,16 @@ an expression is written once and used for values, for structure and for derivat
 
 from __future__ import annotations
 
+import math
 import re
+from collections import defaultdict
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
 
 FUNCTIONS = ("exp", "log", "sqrt")
 LONGEST = 2000  # characters; nobody writes a longer rate law
+MOST = 400  # names, numbers and marks; a longer chain would nest deeper than Python goes
 DEEPEST = 60  # brackets within brackets
 
 
@@ -69,6 +72,8 @@ class Call:
 
 
 Node = Number | Name | Species | Negative | Binary | Call
+
+_OF_FLOATS = {"exp": math.exp, "log": math.log, "sqrt": math.sqrt}
 
 _TOKEN = re.compile(
     r"\s*(?:(?P<number>(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?)"
@@ -198,6 +203,8 @@ def parse(text: str) -> Node:
     if len(text) > LONGEST:
         raise ExpressionError(f"longer than {LONGEST} characters", LONGEST)
     parser = _Parser(text)
+    if len(parser.tokens) > MOST:
+        raise ExpressionError(f"more than {MOST} names, numbers and marks", parser.tokens[MOST][2])
     node = parser.sum()
     kind, mark, position = parser.peek()
     if kind != "end":
@@ -228,6 +235,19 @@ def species(node: Node, initial: bool = False) -> tuple[str, ...]:
     """Species whose concentration now (or, with ``initial``, at the start) occurs."""
     found = (p.name for p in walk(node) if isinstance(p, Species) and p.initial == initial)
     return tuple(dict.fromkeys(found))
+
+
+def numbers_exist(node: Node) -> bool:
+    """Whether every part that is written in numbers alone has a finite value, and none divides by 0.
+
+    A NaN stands for what is not known yet: it goes through every operation, yet 1/0 within, sqrt(-1),
+    log(0) and powers beyond 1e308 raise.
+    """
+    unknown: defaultdict[str, float] = defaultdict(lambda: math.nan)
+    try:
+        return not math.isinf(evaluate(node, unknown, unknown, unknown, _OF_FLOATS, math.pow))
+    except (ArithmeticError, ValueError):
+        return False
 
 
 def evaluate(

@@ -332,6 +332,10 @@ def parse(notes: Notes, entry: Entry, what: str) -> Node | None:
     if any(isinstance(part, Number) and not isfinite(part.value) for part in expressions.walk(node)):
         notes.problem(entry.where, f"{what} holds a number too large to be one")
         return None
+    if not expressions.numbers_exist(node):
+        advice = "Look for a division by 0, the log or root of a negative number, or an enormous power"
+        notes.problem(entry.where, f"{what} holds a number that does not exist", advice=advice)
+        return None
     return node
 
 

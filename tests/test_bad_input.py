@@ -116,6 +116,32 @@ BAD = {
             "numbers, [species], + - * / ^ ( ) and exp, log, sqrt are all there is"
         ],
     ),
+    **{
+        f"no number: {rate}": (
+            [(RATE1, f'"{rate}"')],
+            [
+                "candidates[1].rate: the rate of 'first order in both' holds a number that does not exist. "
+                "Look for a division by 0, the log or root of a negative number, or an enormous power"
+            ],
+        )
+        for rate in (
+            "k*[ester]*[hydroxide]/0",
+            "k*[ester]*[hydroxide]*2^(1/0)",
+            "(1-1)/(1-1)*k*[ester]*[hydroxide]",
+            "k*[ester]*[hydroxide]*9^9^9",
+            "k*[ester]*[hydroxide]*sqrt(-1)",
+            "k*[ester]*[hydroxide]*log(0)",
+            "k*[ester]*[hydroxide]*exp(1000)",
+        )
+    },
+    "endless chain": (
+        [(RATE1, '"k*[ester]' + "*1" * 985 + '"')],
+        [
+            "candidates[1].rate: the rate of 'first order in both' cannot be read: more than 400 names, "
+            'numbers and marks at character 407 of "k*[ester]' + "*1" * 24 + '...". Names, numbers, '
+            "[species], + - * / ^ ( ) and exp, log, sqrt are all there is"
+        ],
+    ),
     "sum of unlike things": (
         [(RATE1, '"k*[ester]*(1+[hydroxide])"')],
         [
