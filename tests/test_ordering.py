@@ -1,4 +1,4 @@
-"""No run far beyond what earlier ones have shown calm: a factor of 2 in concentration, 10 K (common practice)."""
+"""No run far beyond what was shown calm: a factor of 2 in concentration, 10 K (common practice)."""
 
 from __future__ import annotations
 
