@@ -81,7 +81,9 @@ def quadrature(kernel: Kernel, design: Design, readings: Readings, fit: Fit) -> 
     axis, spread = _worst(fit)
     low, high = _where_it_lies(kernel, design, readings, fit, axis, spread)
     nodes = np.linspace(low, high, NODES, axis=1)
-    density = _along(kernel, design, readings, fit, axis, nodes, inner=structural > 1)
+    # where second derivatives are dear, Laplace has to do for the next worst coordinate
+    inner = structural > 1 and kernel.law.second_order
+    density = _along(kernel, design, readings, fit, axis, nodes, inner=inner)
     step = (high - low) / (NODES - 1)
     fine = _trapezoid(density, step)
     coarse = _trapezoid(density[:, ::2], 2 * step)

@@ -24,7 +24,7 @@ from designer.records import Z95, Candidate, Study
 from designer.signals import Law
 
 PRIOR_DRAWS = 4000  # draws of the belief from which those that agree with a pilot are taken
-MOST_GATED = 24  # studies of a plan in which a law without cheap second derivatives goes through the gates
+MOST_GATED = 8  # studies of a plan in which a law without cheap second derivatives goes through the gates
 NEAR = 7.0  # nats below the best beyond which an error of 0.05 in evidence moves no probability by 1e-4
 
 
