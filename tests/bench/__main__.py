@@ -14,8 +14,8 @@ EVERY = ("ester", "dye", "lactone", "hydrogenation")
 HEAD = """# Performance
 
 Written by `python -m tests.bench`, which measures everything on this page in one run (`--all-studies` plans
-all of `studies/`). Compare within the page: absolute times on shared machines mean little. Machine of this run: {cores} cores, Python
-{python}, jax {jax}.
+all of `studies/`). Compare within the page: absolute times on shared machines mean little. Machine of this
+run: {cores} cores, Python {python}, jax {jax}.
 
 ## Evidence
 
