@@ -178,8 +178,8 @@ def _moved(offer: Allowed, proposal: Proposal, levers: np.ndarray, times: np.nda
 
 
 def sweep(hill: Hill, start: Found, size: float, advance: Callable[[], None] | None = None) -> Found:
-    """Move each lever of each run, each time, and each run's length or all its times in turn, both
-    ways by ``size`` (of a lever's way; in ln t); keep what improves."""
+    """Move each lever of each run, each time, and all times of a run together in turn, both ways by
+    ``size`` (of a lever's way; in ln t); keep what improves. Lengths of recorded runs stay as they are."""
     best = start
     for run in range(len(start.proposal.conditions)):
         for trial in _neighbours(hill, best.proposal, run, size):

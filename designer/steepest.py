@@ -8,8 +8,7 @@ through the optimum p*(x) of F. With dF/dp = 0 there, the implicit function theo
 the second term of which the envelope theorem would miss in ln det H (it is the derivative of one
 differentiable Newton step from where the fit stopped). H^-1 dG/dp is a fixed direction, and d2F/dp dx
 along it is the slope of one directional derivative of F. Of F's Hessian only its sum weighted by dG/dH
-is differentiated, and forward: reverse differentiation of the same thing took seven times as long to
-compile.
+is differentiated, and forward: reverse differentiation took more than twice as long to compile.
 """
 
 from __future__ import annotations
